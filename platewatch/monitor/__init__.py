@@ -1,0 +1,1 @@
+"""The plate as watched: estimator, forecast, alarms."""

@@ -1,0 +1,1 @@
+"""Offline work on a plate."""

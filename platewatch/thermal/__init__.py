@@ -1,0 +1,1 @@
+"""The plate as physics: materials, grid, losses, conduction, reduction."""

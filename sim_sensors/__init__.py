@@ -1,0 +1,1 @@
+"""A simulated plate with its own physics, for demonstrations and tests."""
