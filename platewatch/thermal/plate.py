@@ -80,7 +80,7 @@ class Table:
         return len(set(self.value)) == 1
 
     def at(self, temperature_degC: Array | float) -> Array:
-        return np.interp(temperature_degC, self.degC, self.value)
+        return np.asarray(np.interp(temperature_degC, self.degC, self.value), dtype=np.float64)
 
 
 @dataclass(frozen=True)
