@@ -1,0 +1,476 @@
+"""A thin plate as C dT/dt = -K T + B u + offset, every conductance a plain W/K link.
+
+K holds conduction, rim, clamps and the faces' losses, the latter linearised at a
+reference temperature; `loss_watts` gives them exactly.  Heat that enters equals
+heat stored plus heat lost, to rounding.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from enum import StrEnum
+from functools import cached_property
+
+import numpy as np
+from scipy.sparse import coo_array, csc_array, csr_array, diags_array
+from scipy.sparse.linalg import splu
+
+from platewatch.errors import PlateError
+from platewatch.thermal.grid import Grid, footprint, point_row
+from platewatch.thermal.losses import (
+    forced,
+    natural_down,
+    natural_up,
+    radiation_flux,
+    radiation_slope,
+)
+from platewatch.thermal.plate import (
+    Ambient,
+    Correlation,
+    Edge,
+    EdgeKind,
+    Material,
+    Plate,
+    Surface,
+    geometry,
+)
+from platewatch.thermal.stepping import integrate
+from platewatch.types import Array
+
+NOMINAL_AMBIENT_DEGC = 22.0  # of a bus channel, where losses are linearised
+CLOSEST_RIM = 0.1  # cells: the least distance between a cell's centre and a held rim
+
+
+class InputKind(StrEnum):
+    POWER = "power"
+    TEMPERATURE = "temperature"
+
+
+@dataclass(frozen=True)
+class Input:
+    """One driving quantity: "zone/Z1" in W, "surround/ambient" or "const/22" in degC.
+
+    value: of a constant, else None
+    """
+
+    kind: InputKind
+    name: str
+    value: float | None = None
+
+    @property
+    def nominal(self) -> float:
+        """Where the model is linearised: 0 W, the constant, or 22 degC."""
+        if self.kind is InputKind.POWER:
+            return 0.0
+        return NOMINAL_AMBIENT_DEGC if self.value is None else self.value
+
+
+@dataclass(frozen=True, eq=False)
+class Face:
+    """One loaded side of the plate.
+
+    ambient, surroundings: numbers of inputs;  length_m: of the correlation
+    flux(T, T_amb, T_sur) W/m2, of the shape of T
+    """
+
+    surface: Surface
+    ambient: int
+    surroundings: int
+    emissivity: Array  # (n,), 0 where the coefficient is the whole loss
+    length_m: float
+
+    @property
+    def is_linear(self) -> bool:
+        return self.surface.correlation is None and not np.any(self.emissivity)
+
+    def convection(self, T: Array, T_amb: float) -> Array:
+        """W/m2 at the temperatures T, degC."""
+        surface = self.surface
+        match surface.correlation:
+            case None:
+                h: Array | float = surface.coefficient or 0.0
+            case Correlation.NATURAL_UP:
+                h = natural_up(T, T_amb, self.length_m)
+            case Correlation.NATURAL_DOWN:
+                h = natural_down(T, T_amb, self.length_m)
+            case Correlation.FORCED:
+                h = forced(surface.speed_m_s or 0.0, T, T_amb, self.length_m)
+        return h * (T - T_amb)
+
+    def flux(self, T: Array, u: Array, emissivity: Array | None = None) -> Array:
+        """Loss, W/m2; emissivity of the places of T where these are not the cells."""
+        grey = self.emissivity if emissivity is None else emissivity
+        lost = self.convection(T, u[self.ambient])
+        if self.is_linear:
+            return lost
+        return lost + radiation_flux(grey, T, u[self.surroundings])
+
+    def slopes(self, T: Array, u: Array) -> tuple[Array, Array, Array]:
+        """Derivatives of the flux by T, ambient and surroundings, W/m2K."""
+        step, T_amb = 1e-3, float(u[self.ambient])
+        by_T = (self.convection(T + step, T_amb) - self.convection(T - step, T_amb)) / (2 * step)
+        by_amb = (self.convection(T, T_amb + step) - self.convection(T, T_amb - step)) / (2 * step)
+        by_T = by_T + radiation_slope(self.emissivity, T)
+        by_sur = -radiation_slope(self.emissivity, u[self.surroundings])
+        return by_T, by_amb, by_sur
+
+
+@dataclass(frozen=True, eq=False)
+class Stack:
+    """What lies under each cell, (n,): area fractions of the materials through all layers.
+
+    fraction (n, m): of a cell's area, thickness (m,) included in `thickness_m` products
+    """
+
+    parts: tuple[tuple[Material, Array], ...]  # material, its volume per area (n,) m
+    thickness_m: Array  # (n,)
+
+    def sheet_conductance(self, T: Array | float) -> Array:
+        """k d, W/K, at the temperatures T (n,) degC."""
+        return np.sum([m.k.at(T) * depth for m, depth in self.parts], axis=0)
+
+    def heat_capacity(self, T: Array | float) -> Array:
+        """rho cp d, J/m2K, at the temperatures T (n,) degC."""
+        return np.sum([m.rho * m.cp.at(T) * depth for m, depth in self.parts], axis=0)
+
+    @property
+    def is_constant(self) -> bool:
+        return all(m.k.is_constant and m.cp.is_constant for m, _ in self.parts)
+
+
+@dataclass(frozen=True, eq=False)
+class ThermalModel:
+    """C dT/dt = -K T + B u + offset.
+
+    capacity (n,) J/K;  K (n, n) W/K, symmetric;  B (n, m) W per unit of input
+    inputs: m of them;  offset (n,) W: the constant of the linearised losses
+    faces: the two sides, for the exact loss;  face_area (n,) m2
+    """
+
+    plate: Plate
+    grid: Grid
+    capacity: Array
+    K: csr_array
+    B: Array
+    inputs: tuple[Input, ...]
+    offset: Array
+    reference_degC: float
+    stack: Stack
+    faces: tuple[Face, ...]
+
+    @cached_property
+    def has_loss(self) -> bool:
+        """Whether heat can leave at all; without, K is singular."""
+        return float(self.K.sum()) > 1e-12 * float(np.abs(self.K.diagonal()).sum())
+
+    @cached_property
+    def static(self) -> Callable[[Array], Array]:
+        """Solves K w = q, q (n,) or (n, k); see `static_solver`."""
+        return static_solver(self.K, self.capacity, self.has_loss)
+
+    @cached_property
+    def nominal(self) -> Array:
+        """The inputs (m,) at which the model was linearised."""
+        return np.array([each.nominal for each in self.inputs])
+
+    def input_number(self, name: str) -> int:
+        """Raises PlateError naming the inputs there are."""
+        for number, each in enumerate(self.inputs):
+            if each.name == name:
+                return number
+        raise PlateError(
+            f"no input {name!r}; this plate has {', '.join(each.name for each in self.inputs)}"
+        )
+
+
+def static_solver(K: csr_array, capacity: Array, has_loss: bool) -> Callable[[Array], Array]:
+    """Factor K once.  Without any loss, K w = q - C 1 (1'q)/(1'C 1) with w'C 1 = 0."""
+    if has_loss:
+        solve: Callable[[Array], Array] = splu(csc_array(K)).solve
+        return solve
+    n, scale = capacity.size, float(np.abs(K.diagonal()).mean())
+    border = (capacity * (scale / capacity.mean()))[:, None]
+    bordered = np.arange(n), np.full(n, n)
+    coo = K.tocoo()
+    rows = np.concatenate((coo.row, *bordered))
+    columns = np.concatenate((coo.col, *bordered[::-1]))
+    values = np.concatenate((coo.data, border[:, 0], border[:, 0]))
+    factors = splu(csc_array(coo_array((values, (rows, columns)), shape=(n + 1, n + 1))))
+
+    def solve_balanced(q: Array) -> Array:
+        padded = np.concatenate((q, np.zeros_like(q[:1])))
+        answer: Array = factors.solve(padded)[:n]
+        return answer
+
+    return solve_balanced
+
+
+def build_model(plate: Plate, grid: Grid, reference_degC: float) -> ThermalModel:
+    """Assemble a plate; losses linearised and properties taken at reference_degC.
+
+    The linear loss of each face equals the true one at the reference and the nominal
+    ambient (the constant, or 22 degC for a bus channel).  Raises PlateError for a zone
+    or an edge that does not lie on the plate.
+    """
+    inputs = _inputs(plate)
+    number = {each.name: i for i, each in enumerate(inputs)}
+    stack = _stack(plate, grid)
+    B = np.zeros((grid.n, len(inputs)))
+    for zone_no, zone in enumerate(plate.zones):
+        B[:, zone_no] = _zone_share(grid, plate, zone_no, zone.name)
+    diagonal, offset = np.zeros(grid.n), np.zeros(grid.n)
+    rim_cell, rim_link, rim_input = _rim_links(plate, grid, stack, number, reference_degC)
+    np.add.at(diagonal, rim_cell, rim_link)
+    np.add.at(B, (rim_cell, rim_input), rim_link)
+    for cells, share, into in _clamps(plate, grid, number):
+        np.add.at(diagonal, cells, share)
+        np.add.at(B[:, into], cells, share)
+    faces = _faces(plate, grid, number)
+    reference = np.full(grid.n, reference_degC)
+    nominal = np.array([each.nominal for each in inputs])
+    for face in faces:
+        by_T, by_amb, by_sur = face.slopes(reference, nominal)
+        diagonal += grid.area * by_T
+        B[:, face.ambient] -= grid.area * by_amb
+        B[:, face.surroundings] -= grid.area * by_sur
+        linear_part = by_T * reference_degC + by_amb * nominal[face.ambient]
+        linear_part = linear_part + by_sur * nominal[face.surroundings]
+        if not face.is_linear:
+            offset -= grid.area * (face.flux(reference, nominal) - linear_part)
+    K = conduction_matrix(grid, stack.sheet_conductance(reference_degC)) + diags_array(diagonal)
+    return ThermalModel(
+        plate,
+        grid,
+        grid.area * stack.heat_capacity(reference_degC),
+        csr_array(K),
+        B,
+        inputs,
+        offset,
+        reference_degC,
+        stack,
+        faces,
+    )
+
+
+def conduction_matrix(grid: Grid, sheet_conductance: Array) -> csr_array:
+    """In-plane conduction (n, n) W/K: harmonic mean of k d (n,) across each open face."""
+    links = grid.links
+    a, b = sheet_conductance[links.i], sheet_conductance[links.j]
+    g = 2 * a * b / (a + b) * links.length_m / links.distance_m
+    rows = np.concatenate((links.i, links.j, links.i, links.j))
+    columns = np.concatenate((links.j, links.i, links.i, links.j))
+    values = np.concatenate((-g, -g, g, g))
+    return csr_array(coo_array((values, (rows, columns)), shape=(grid.n, grid.n)))
+
+
+def loss_watts(model: ThermalModel, T: Array, u: Array) -> Array:
+    """What both faces really lose, (n,) W, at cell temperatures T (n,) and inputs u (m,)."""
+    flux = np.sum([face.flux(T, u) for face in model.faces], axis=0)
+    return model.grid.area * flux
+
+
+def linear_loss_watts(model: ThermalModel, T: Array, u: Array) -> Array:
+    """What both faces lose in the linear model, (n,) W."""
+    reference = np.full(model.grid.n, model.reference_degC)
+    total = np.zeros(model.grid.n)
+    for face in model.faces:
+        by_T, by_amb, by_sur = face.slopes(reference, model.nominal)
+        total += face.flux(reference, model.nominal) + by_T * (T - reference)
+        total += by_amb * (u[face.ambient] - model.nominal[face.ambient])
+        total += by_sur * (u[face.surroundings] - model.nominal[face.surroundings])
+    return model.grid.area * total
+
+
+def input_vector(
+    model: ThermalModel,
+    powers: dict[str, float] | None = None,
+    surround: dict[str, float] | None = None,
+) -> Array:
+    """u (m,) from watts by zone and degC by channel; what is not named stays nominal.
+
+    Names: "Z1" or "zone/Z1", "ambient" or "surround/ambient".  Raises PlateError for
+    a zone that the plate does not have; a channel that it does not use is ignored.
+    """
+    u = model.nominal.copy()
+    for name, watts in (powers or {}).items():
+        u[model.input_number(name if name.startswith("zone/") else f"zone/{name}")] = watts
+    names = [each.name for each in model.inputs]
+    for name, degC in (surround or {}).items():
+        full = name if name.startswith("surround/") else f"surround/{name}"
+        if full in names:
+            u[names.index(full)] = degC
+    return u
+
+
+def steady(
+    model: ThermalModel, u: Array, extra: Array | None = None, mean_degC: float = 0.0
+) -> Array:
+    """Final temperatures (n,) of the linear model for inputs u (m,) and extra heat (n,) W.
+
+    On a plate without any loss the heat must sum to zero; mean_degC then fixes the mean.
+    Raises PlateError when it does not.
+    """
+    q = model.B @ u + model.offset + (0.0 if extra is None else extra)
+    if model.has_loss:
+        return model.static(q)
+    check_balanced(q)
+    return model.static(q) + mean_degC
+
+
+def check_balanced(q: Array) -> None:
+    """Raises PlateError unless the heat q (n,) W of a plate without loss sums to zero."""
+    total, size = float(q.sum()), float(np.abs(q).sum())
+    if abs(total) > 1e-9 * max(size, 1e-9):
+        raise PlateError(
+            f"this plate loses no heat at all, so {total:.4g} W has no final temperature; "
+            "describe its surfaces or edges, or ask for a time (--after)"
+        )
+
+
+def transient(
+    model: ThermalModel,
+    initial: Array,
+    u: Array | Callable[[float], Array],
+    times_s: Array,
+    extra: Array | None = None,
+    tolerance_K: float = 1e-3,
+) -> Array:
+    """Temperatures (t, n) of the linear model at times_s (t,), from `initial` (n,) at 0 s.
+
+    u: inputs (m,), or a function of the time in seconds;  extra: heat (n,) W
+    """
+    added = model.offset + (0.0 if extra is None else extra)
+    drive = u if callable(u) else lambda _t, held=np.asarray(u): held
+
+    def rate(t: float, T: Array) -> Array:
+        return model.B @ drive(t) + added - model.K @ T
+
+    return integrate(
+        model.capacity, rate, lambda _t, _T: model.K, initial, times_s, tolerance_K, linear=True
+    )
+
+
+def _inputs(plate: Plate) -> tuple[Input, ...]:
+    inputs = [Input(InputKind.POWER, f"zone/{zone.name}") for zone in plate.zones]
+    asked: list[Ambient | None] = [plate.top.ambient, plate.bottom.ambient]
+    asked += [plate.top.surroundings, plate.bottom.surroundings]
+    asked += [edge.ambient for edge in plate.edges] + [edge.held for edge in plate.edges]
+    asked += [clamp.ambient for clamp in plate.clamps]
+    for ambient in asked:
+        if ambient is None:
+            continue
+        each = Input(InputKind.TEMPERATURE, _ambient_name(ambient), _constant(ambient))
+        if each not in inputs:
+            inputs.append(each)
+    return tuple(inputs)
+
+
+def _ambient_name(ambient: Ambient) -> str:
+    return ambient if isinstance(ambient, str) else f"const/{float(ambient)}"
+
+
+def _constant(ambient: Ambient) -> float | None:
+    return None if isinstance(ambient, str) else float(ambient)
+
+
+def _stack(plate: Plate, grid: Grid) -> Stack:
+    """Insets replace the base plate where they lie; later ones win; layers lie everywhere."""
+    base = np.ones(grid.n)
+    parts: list[tuple[Material, Array]] = []
+    for number, inset in enumerate(plate.insets):
+        region = geometry(inset.shape)
+        for later in plate.insets[number + 1 :]:
+            region = region.difference(geometry(later.shape))
+        share = footprint(grid, region) / grid.area
+        base = base - share
+        parts.append(
+            (inset.material or plate.material, share * (inset.thickness_m or plate.thickness_m))
+        )
+    parts.insert(0, (plate.material, np.clip(base, 0, 1) * plate.thickness_m))
+    parts += [(layer.material, np.full(grid.n, layer.thickness_m)) for layer in plate.layers]
+    return Stack(tuple(parts), np.sum([depth for _, depth in parts], axis=0))
+
+
+def _zone_share(grid: Grid, plate: Plate, zone_no: int, name: str) -> Array:
+    covered = np.sum([footprint(grid, shape) for shape in plate.zones[zone_no].shapes], axis=0)
+    if covered.sum() <= 0:
+        raise PlateError(f"zone {name!r} does not lie on the plate; correct its shape")
+    share: Array = covered / covered.sum()
+    return share
+
+
+def _rim_links(
+    plate: Plate, grid: Grid, stack: Stack, number: dict[str, int], reference_degC: float
+) -> tuple[Array, Array, Array]:
+    """Cells, links W/K and inputs of the rim that is not insulated.
+
+    The signed distance makes a disc converge at second order; with plain h L it
+    would be first order, see verification/test_cut_cells.py.
+    """
+    rim = grid.rim
+    active = np.array([e.kind is not EdgeKind.INSULATED for e in plate.edges] + [False])[rim.edge]
+    cell, length, s = rim.cell[active], rim.length_m[active], rim.s_m[active]
+    edges = [plate.edges[k] for k in rim.edge[active]]
+    d = stack.thickness_m[cell]
+    k = stack.sheet_conductance(reference_degC)[cell] / d
+    h = np.array([_edge_coefficient(e, depth) for e, depth in zip(edges, d, strict=True)])
+    with np.errstate(divide="ignore"):
+        film = np.where(h > 0, 1 / h, np.inf)
+    resistance = np.maximum(film + s / k, CLOSEST_RIM * min(grid.hx, grid.hy) / k)
+    into = np.array([number[_ambient_name(_edge_ambient(plate, e))] for e in edges], dtype=int)
+    return cell, length * d / resistance, into
+
+
+def _edge_coefficient(edge: Edge, thickness_m: float) -> float:
+    """W/m2K over the edge's thickness; infinite where it is held."""
+    if edge.kind is EdgeKind.HELD:
+        return np.inf
+    return (edge.coefficient or 0.0) + (edge.w_per_k_per_m or 0.0) / thickness_m
+
+
+def _edge_ambient(plate: Plate, edge: Edge) -> Ambient:
+    if edge.kind is EdgeKind.HELD:
+        if edge.held is None:
+            raise PlateError("edge: a held edge needs the temperature it is held at")
+        return edge.held
+    return plate.top.ambient if edge.ambient is None else edge.ambient
+
+
+def _clamps(plate: Plate, grid: Grid, number: dict[str, int]) -> list[tuple[Array, Array, int]]:
+    """Cells, W/K and input of every clamp; spread over the cells that tell its temperature.
+
+    Weights of an interpolation may be negative; those would make K lose its diagonal
+    dominance, so only the positive ones take part.
+    """
+    links = []
+    for clamp in plate.clamps:
+        weights = np.maximum(point_row(grid, clamp.x_m, clamp.y_m), 0)
+        cells = np.flatnonzero(weights)
+        share = clamp.w_per_k * weights[cells] / weights.sum()
+        ambient = plate.top.ambient if clamp.ambient is None else clamp.ambient
+        links.append((cells, share, number[_ambient_name(ambient)]))
+    return links
+
+
+def _faces(plate: Plate, grid: Grid, number: dict[str, int]) -> tuple[Face, ...]:
+    domain = grid.domain
+    faces = []
+    for surface in (plate.top, plate.bottom):
+        whole = surface.coefficient is not None
+        grey = plate.material.emissivity if surface.emissivity is None else surface.emissivity
+        if surface.correlation is Correlation.FORCED:
+            length = float(np.sqrt(domain.area))
+        else:
+            length = domain.area / domain.exterior.length
+        beyond = surface.ambient if surface.surroundings is None else surface.surroundings
+        faces.append(
+            Face(
+                surface,
+                number[_ambient_name(surface.ambient)],
+                number[_ambient_name(beyond)],
+                np.full(grid.n, 0.0 if whole else grey),
+                length,
+            )
+        )
+    return tuple(faces)
