@@ -32,3 +32,22 @@ class CauseOptions:
 
     off: tuple[str, ...] = ()
     prior: tuple[tuple[str, float], ...] = ()
+
+
+CAUSE_NAMES = (
+    "zone not heating",
+    "zone stays on",
+    "cold load",
+    "unknown heat",
+    "loss changed",
+    "sensor step",
+    "sensor drift",
+    "sensor stuck",
+    "sensor loose",
+    "sensor reversed",
+    "sensor wrong type",
+    "sensor lag changed",
+    "sensor noisy",
+    "junction block shift",
+    "swapped pair",
+)

@@ -1,0 +1,436 @@
+"""The tables that describe the plate itself, as they stand in the file."""
+
+from __future__ import annotations
+
+import datetime as dt
+import itertools
+from collections.abc import Iterator
+from typing import Annotated, Any
+
+from pydantic import BeforeValidator, Field, PlainValidator
+
+from platewatch.adapters.settings_schema import (
+    Entry,
+    Mistake,
+    OneOf,
+    SurroundChannel,
+    Temperature,
+    TopicName,
+    Within,
+    a_number,
+)
+from platewatch.thermal.plate import Correlation, DutyLaw, EdgeKind, LoopForm, Role, Side
+from platewatch.units import TemperatureUnit
+
+Points = list[tuple[float, float]]
+
+_SHAPE_KEYS = {
+    "rectangle": ("width_mm", "height_mm"),
+    "circle": ("diameter_mm",),
+    "polygon": ("points_mm",),
+}
+_PLACE_KEYS = ("x_mm", "y_mm")
+
+THERMOCOUPLES = ("K", "J", "T", "N", "E", "S", "R", "B")
+SIGNALS = ("degC", "degF", "K", "mV", "ohm", "mA")
+TOLERANCE_CLASSES = {
+    # IEC 60584-1:2013, table of tolerance classes; IEC 60751:2022 for pt100.
+    **dict.fromkeys(("K", "N", "E", "T"), ("1", "2", "3")),
+    "J": ("1", "2"),
+    **dict.fromkeys(("R", "S"), ("1", "2")),
+    "B": ("2", "3"),
+    "pt100": ("AA", "A", "B", "C"),
+}
+_SAFETY = (
+    "platewatch is no safety function and must not stand in for one",
+    'write "control" or "monitor"; a limiter has its own sensor and its own cut-off',
+)
+
+
+def _pairs(value: Any, what: str, least: int) -> Points:
+    if not isinstance(value, list) or len(value) < least:
+        raise ValueError(f"expects at least {least} {what} pairs; write [[{what}], ...]")
+    for number, pair in enumerate(value, start=1):
+        if not isinstance(pair, list) or len(pair) != 2:
+            raise ValueError(f"entry {number} is not a pair; write [{what}]")
+    return [(a_number(first), a_number(second)) for first, second in value]
+
+
+def _property(value: Any) -> float | Points:
+    return _pairs(value, "temperature, value", 2) if isinstance(value, list) else a_number(value)
+
+
+def _ambient(value: Any) -> float | str:
+    return value if isinstance(value, str) else a_number(value)
+
+
+def _class_word(value: Any) -> Any:
+    return str(value) if isinstance(value, int) and not isinstance(value, bool) else value
+
+
+def _date(value: Any) -> str:
+    if isinstance(value, dt.date) and not isinstance(value, dt.datetime):
+        return value.isoformat()
+    try:
+        return dt.date.fromisoformat(value).isoformat()
+    except (TypeError, ValueError):
+        raise ValueError(f"{value!s} is not a date; write 2026-03-31") from None
+
+
+Property = Annotated[float | Points, PlainValidator(_property)]
+Place = Annotated[float | None, Within(-1e5, 1e5, "give it in millimetres")]
+Size = Annotated[float | None, Within(0, 2e4, "give a positive length in millimetres", above=True)]
+AmbientValue = Annotated[float | str, PlainValidator(_ambient), SurroundChannel()]
+AmbientOption = Annotated[float | str | None, PlainValidator(_ambient), SurroundChannel()]
+DateText = Annotated[str, PlainValidator(_date)]
+Thickness = Annotated[
+    float | None,
+    Within(0, 500, "give the thickness in millimetres, above 0 and at most 500", above=True),
+]
+Emissivity = Annotated[
+    float | None, Within(0, 1, "an emissivity lies between 0 and 1 (0.1 bright, 0.9 painted)")
+]
+Coefficient = Annotated[
+    float | None, Within(0, 1e5, "give W/m2K, at least 0; leave no loss out as 0")
+]
+
+
+class ShapeEntry(Entry):
+    shape: Annotated[str, OneOf(tuple(_SHAPE_KEYS))]
+    x_mm: Place = None
+    y_mm: Place = None
+    width_mm: Size = None
+    height_mm: Size = None
+    diameter_mm: Size = None
+    points_mm: Annotated[Points | None, PlainValidator(lambda value: _pairs(value, "x, y", 3))] = (
+        None
+    )
+
+    @property
+    def complete(self) -> bool:
+        needed = _SHAPE_KEYS.get(self.shape, ("shape",))
+        sizes = [getattr(self, key) for key in needed if key != "points_mm"]
+        known = all(getattr(self, key) is not None for key in needed)
+        return self.shape in _SHAPE_KEYS and known and all(size > 0 for size in sizes)
+
+    def mistakes(self) -> Iterator[Mistake]:
+        if self.shape not in _SHAPE_KEYS:
+            return
+        needed = _SHAPE_KEYS[self.shape]
+        for key in needed:
+            if getattr(self, key) is None:
+                yield Mistake((key,), f"is missing for a {self.shape}", f"add {key} = ...")
+        allowed = (*needed, *(() if self.shape == "polygon" else _PLACE_KEYS), "shape")
+        for key in sorted(self.model_fields_set - set(allowed)):
+            yield Mistake(
+                (key,), f"says nothing about a {self.shape}", f"use {', '.join(allowed[:-1])}"
+            )
+
+
+def _as_list(value: Any) -> Any:
+    return [value] if isinstance(value, dict) else value
+
+
+Shapes = Annotated[list[ShapeEntry], BeforeValidator(_as_list)]
+
+
+class PlateEntry(Entry):
+    name: Annotated[str, TopicName()]
+    unit: Annotated[str, OneOf(tuple(TemperatureUnit))] = "degC"
+    outline: ShapeEntry
+    holes: list[ShapeEntry] = Field(default_factory=list)
+    thickness_mm: Annotated[float, *Thickness.__metadata__]
+    material: str
+    cell_mm: Size = None
+    working_margin_mm: Annotated[
+        float, Within(0, 1e4, "give the rim left out of uniformity figures, in mm, 0 or more")
+    ] = 0.0
+    position_note: str = ""
+
+
+class MaterialEntry(Entry):
+    name: str
+    k: Property
+    rho: Annotated[float, Within(1, 25_000, "give the density in kg/m3 (steel 7850)")]
+    cp: Property
+    emissivity: Emissivity = None
+    source: str = ""
+
+    def mistakes(self) -> Iterator[Mistake]:
+        yield from _property_mistakes("k", self.k, 0.005, 3000, "W/mK (mild steel about 48)")
+        yield from _property_mistakes("cp", self.cp, 50, 10_000, "J/kgK (mild steel about 490)")
+
+
+def _property_mistakes(
+    key: str, value: float | Points, low: float, high: float, unit: str
+) -> Iterator[Mistake]:
+    values = [value] if isinstance(value, float) else [second for _, second in value]
+    for number in values:
+        if not low <= number <= high:
+            reason = f"{number:g} is not plausible, expected {low:g} to {high:g}"
+            yield Mistake((key,), reason, f"give {unit}")
+    if isinstance(value, list):
+        at = [first for first, _ in value]
+        for before, after in itertools.pairwise(at):
+            if after <= before:
+                reason = f"the table's temperatures do not increase ({before:g}, then {after:g})"
+                yield Mistake((key,), reason, "sort the pairs by temperature, each once")
+
+
+class FaceEntry(Entry):
+    ambient: AmbientValue
+    coefficient: Coefficient = None
+    correlation: Annotated[str | None, OneOf(tuple(Correlation))] = None
+    speed_m_s: Annotated[
+        float | None, Within(0, 100, "give the air speed in m/s, above 0", above=True)
+    ] = None
+    emissivity: Emissivity = None
+    surroundings: AmbientOption = None
+
+    def mistakes(self) -> Iterator[Mistake]:
+        if self.coefficient is None and self.correlation is None:
+            yield Mistake(
+                (),
+                "says neither coefficient nor correlation",
+                'give coefficient = ... (W/m2K, the whole loss) or correlation = "natural-up"',
+            )
+        if self.coefficient is not None and self.correlation is not None:
+            yield Mistake(
+                ("coefficient",),
+                "stands beside a correlation",
+                "keep one: a coefficient is the whole loss, a correlation convection only",
+            )
+        if self.correlation == Correlation.FORCED and self.speed_m_s is None:
+            yield Mistake(
+                ("speed_m_s",), "is missing for forced convection", "add the air speed in m/s"
+            )
+        if self.correlation != Correlation.FORCED and self.speed_m_s is not None:
+            yield Mistake(
+                ("speed_m_s",),
+                "has no meaning without forced convection",
+                'write correlation = "forced" or leave it out',
+            )
+        if self.coefficient is not None and self.correlation is None:
+            for key in ("emissivity", "surroundings"):
+                if key == "surroundings" and self.surroundings is not None:
+                    yield Mistake(
+                        (key,),
+                        "has no meaning beside a coefficient, which is the whole loss",
+                        "use a correlation, or leave it out",
+                    )
+
+
+class SurfaceEntry(Entry):
+    top: FaceEntry
+    bottom: FaceEntry
+
+
+class EdgeEntry(Entry):
+    kind: Annotated[str, OneOf(tuple(EdgeKind))]
+    coefficient: Coefficient = None
+    w_per_k_per_m: Annotated[float | None, Within(0, 1e4, "give W/K per metre of rim")] = None
+    temperature: AmbientOption = None
+    ambient: AmbientOption = None
+    side: Annotated[str | None, OneOf(tuple(Side))] = None
+    segment: int | None = None
+
+    def mistakes(self) -> Iterator[Mistake]:
+        losses = [k for k in ("coefficient", "w_per_k_per_m") if getattr(self, k) is not None]
+        if self.kind == EdgeKind.CONVECTIVE and len(losses) != 1:
+            yield Mistake(
+                tuple(losses[:1]),
+                "a convective edge needs one of coefficient and w_per_k_per_m",
+                "give W/m2K over thickness x length, or W/K per metre, not both",
+            )
+        if self.kind == EdgeKind.HELD and self.temperature is None:
+            yield Mistake(
+                ("temperature",),
+                "is missing for a held edge",
+                'add temperature = a number or a channel such as "surround/frame"',
+            )
+        allowed = {
+            EdgeKind.INSULATED: (),
+            EdgeKind.CONVECTIVE: ("coefficient", "w_per_k_per_m", "ambient"),
+            EdgeKind.HELD: ("temperature",),
+        }
+        if self.kind in allowed:
+            for key in ("coefficient", "w_per_k_per_m", "temperature", "ambient"):
+                if getattr(self, key) is not None and key not in allowed[EdgeKind(self.kind)]:
+                    yield Mistake((key,), f"says nothing about a {self.kind} edge", "leave it out")
+        if self.side is not None and self.segment is not None:
+            yield Mistake(("segment",), "stands beside side", "name one part of the rim, not two")
+
+
+class ClampEntry(Entry):
+    x_mm: float
+    y_mm: float
+    w_per_k: Annotated[float, Within(0, 1000, "give the clamp's conductance in W/K, 0 or more")]
+    ambient: AmbientOption = None
+
+
+class ContactEntry(Entry):
+    name: Annotated[str, TopicName()]
+    shape: ShapeEntry
+    conductance: Annotated[
+        float, Within(0, 1e5, "give the contact conductance in W/m2K (dry 200 to 1000)", True)
+    ]
+    heat_capacity: Annotated[
+        float, Within(0, 1e8, "give mass times specific heat, J/K, above 0", True)
+    ]
+
+
+class LayerEntry(Entry):
+    material: str
+    thickness_mm: Annotated[float, *Thickness.__metadata__]
+
+
+class InsetEntry(Entry):
+    shape: ShapeEntry
+    material: str | None = None
+    thickness_mm: Thickness = None
+
+    def mistakes(self) -> Iterator[Mistake]:
+        if self.material is None and self.thickness_mm is None:
+            yield Mistake((), "changes nothing", "give material or thickness_mm, or both")
+
+
+class LoopEntry(Entry):
+    sensor: str
+    gain: Annotated[
+        float, Within(0, 100, "give the gain as duty (0..1) per kelvin, above 0", above=True)
+    ]
+    integral_s: Annotated[
+        float | None, Within(0, 1e6, "give the integral time in s, or leave it out", above=True)
+    ] = None
+    derivative_s: Annotated[float, Within(0, 1e5, "give the derivative time in s, 0 or more")] = 0.0
+    form: Annotated[str, OneOf(tuple(LoopForm))] = "ideal"
+    low: Annotated[float, Within(0, 1, "output limits are duties, 0..1")] = 0.0
+    high: Annotated[float, Within(0, 1, "output limits are duties, 0..1")] = 1.0
+
+    def mistakes(self) -> Iterator[Mistake]:
+        if self.low >= self.high:
+            yield Mistake(
+                ("low",),
+                f"the lower output limit {self.low:g} is not below the upper {self.high:g}",
+                "give 0 <= low < high <= 1",
+            )
+
+
+class ZoneEntry(Entry):
+    name: Annotated[str, TopicName()]
+    shape: Shapes
+    watts: Annotated[
+        float, Within(0, 1e6, "give the zone's rated power in watts, above 0", above=True)
+    ]
+    lag_s: Annotated[float, Within(0, 7200, "give the heater's lag in s, 0 or more")] = 0.0
+    duty: Annotated[str | None, OneOf(("0..1", "0..100"))] = None
+    duty_law: Annotated[str, OneOf(tuple(DutyLaw))] = "linear"
+    duty_exponent: Annotated[
+        float | None, Within(0, 10, "give the n of power = duty^n, above 0", above=True)
+    ] = None
+    loop: LoopEntry | None = None
+    where: str = ""
+
+    def mistakes(self) -> Iterator[Mistake]:
+        if not self.shape:
+            yield Mistake(("shape",), "the zone covers nothing", "give at least one shape")
+        if self.duty is None:
+            yield Mistake(
+                ("duty",),
+                "is missing: the scale of the duty is asked, never guessed",
+                'add duty = "0..1" or duty = "0..100", as the controller sends it',
+            )
+        if (self.duty_law == DutyLaw.POWER) != (self.duty_exponent is not None):
+            yield Mistake(
+                ("duty_exponent",),
+                'belongs to duty_law "power" and only to it',
+                'write duty_law = "power" and duty_exponent = n together',
+            )
+
+
+class SensorEntry(Entry):
+    name: Annotated[str, TopicName()]
+    x_mm: float
+    y_mm: float
+    element: Annotated[str | None, OneOf((*THERMOCOUPLES, "pt100"))] = None
+    signal: Annotated[str, OneOf(SIGNALS)] = "degC"
+    span: Annotated[list[float] | None, Temperature()] = None
+    tolerance_class: Annotated[str | None, BeforeValidator(_class_word)] = None
+    lag_s: Annotated[float, Within(0, 3600, "give the sensor's lag in s, 0 or more")] = 0.0
+    noise: Annotated[
+        float, Within(0, 50, "give the standard deviation of its noise, above 0", above=True)
+    ] = 0.2
+    quantum: Annotated[float, Within(0, 50, "give the rounding step, 0 for none")] = 0.0
+    cold_junction: AmbientOption = None
+    junction_block: str = ""
+    correction: Annotated[float, Within(-100, 100, "give what is added to the reading")] = 0.0
+    calibrated_on: DateText = ""
+    due_on: DateText = ""
+    certificate: str = ""
+    role: Annotated[
+        str, OneOf(tuple(Role), dict.fromkeys(("safety", "limiter", "trip"), _SAFETY))
+    ] = "monitor"
+    where: str = ""
+
+    def mistakes(self) -> Iterator[Mistake]:
+        yield from self._signal_mistakes()
+        yield from self._class_mistakes()
+        if self.due_on and self.calibrated_on and self.due_on < self.calibrated_on:
+            yield Mistake(
+                ("due_on",),
+                f"{self.due_on} lies before calibrated_on {self.calibrated_on}",
+                "correct the dates",
+            )
+
+    def _signal_mistakes(self) -> Iterator[Mistake]:
+        couple = self.element in THERMOCOUPLES
+        if self.signal == "mA" and self.span is None:
+            yield Mistake(
+                ("span",),
+                "is missing for a mA signal",
+                "add span = [temperature at 4 mA, temperature at 20 mA]",
+            )
+        if self.signal != "mA" and self.span is not None:
+            yield Mistake(("span",), "belongs to a mA signal only", "leave it out")
+        if self.span is not None and (len(self.span) != 2 or self.span[0] >= self.span[-1]):
+            yield Mistake(("span",), "is not [low, high] with low below high", "correct it")
+        if self.signal in ("mV", "ohm") and self.element is None:
+            yield Mistake(
+                ("element",), f"is missing for a signal in {self.signal}", 'add element = "K" ...'
+            )
+        if self.signal == "mV" and self.element == "pt100":
+            yield Mistake(("signal",), "a pt100 gives no mV", 'write signal = "ohm" or "degC"')
+        if self.signal == "ohm" and couple:
+            yield Mistake(
+                ("signal",), f"a type {self.element} thermocouple gives no ohm", 'write "mV"'
+            )
+        if self.signal == "mV" and couple and self.cold_junction is None:
+            yield Mistake(
+                ("cold_junction",),
+                "is missing for a signal in mV",
+                'add cold_junction = a temperature or a channel such as "surround/cabinet"',
+            )
+
+    def _class_mistakes(self) -> Iterator[Mistake]:
+        word = self.tolerance_class
+        if word is None:
+            return
+        if self.element is None:
+            yield Mistake(("element",), "is missing for a tolerance class", 'add element = "K" ...')
+            return
+        possible = TOLERANCE_CLASSES.get(self.element)
+        if possible is not None and word not in possible:
+            norm = "IEC 60751" if self.element == "pt100" else "IEC 60584-1"
+            yield Mistake(
+                ("tolerance_class",),
+                f"{norm} knows no class {word} for {self.element}",
+                f"use {' or '.join(possible)}, or leave it out",
+            )
+
+
+class UncertainEntry(Entry):
+    k: Annotated[float, Within(0, 1, "give a relative standard deviation, 0..1")] = 0.05
+    cp: Annotated[float, Within(0, 1, "give a relative standard deviation, 0..1")] = 0.02
+    losses: Annotated[float, Within(0, 1, "give a relative standard deviation, 0..1")] = 0.15
+    power: Annotated[float, Within(0, 1, "give a relative standard deviation, 0..1")] = 0.05
+    emissivity: Annotated[float, Within(0, 1, "give a relative standard deviation, 0..1")] = 0.15
