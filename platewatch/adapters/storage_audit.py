@@ -1,0 +1,103 @@
+"""What `platewatch verify` checks: the file, the hash chains, the stored descriptions."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+from sqlalchemy import Connection, Table, select
+
+from .storage_chain import GENESIS, ChainHead, chain_head, check_anchor, check_chain
+from .storage_tables import (
+    CHAINS,
+    action_applied,
+    alarm_event,
+    description,
+    log_note,
+    person_action,
+)
+
+CAUTION = (
+    "A chain whose tail was cut, or that was rewritten as a whole, cannot be told from an "
+    "honest one by the database alone: compare the last row numbers and hashes with those on "
+    "the shift reports."
+)
+REMOVED = "removed by retention: "
+_SHOWN = 50
+
+
+@dataclass(frozen=True)
+class Verification:
+    """findings: one line each, empty if all is well;  heads: last row of each chain."""
+
+    findings: tuple[str, ...]
+    heads: tuple[ChainHead, ...]
+    caution: str = CAUTION
+
+    @property
+    def ok(self) -> bool:
+        return not self.findings
+
+
+def verify_record(connection: Connection, anchors: Sequence[ChainHead]) -> Verification:
+    """Read everything once, in one transaction."""
+    findings = [*_file_findings(connection), *_description_findings(connection)]
+    for table in CHAINS:
+        findings += _limited(check_chain(connection, table, chain_start(connection, table)))
+        for anchor in anchors:
+            if anchor.table == table.name and anchor.seq:
+                findings += check_anchor(connection, table, anchor)
+    heads = tuple(chain_head(connection, table) for table in CHAINS)
+    return Verification(tuple(findings), heads)
+
+
+def removal_note(head: ChainHead) -> str:
+    """Text of the log-book line that says where a chain begins after retention."""
+    return REMOVED + json.dumps({"table": head.table, "to_seq": head.seq, "hash": head.hash})
+
+
+def chain_start(connection: Connection, table: Table) -> ChainHead:
+    """The last row that retention removed, as the log book has it; number 0 if none.
+
+    Only alarm events are ever removed, and only from the beginning; actions and the log book
+    stay for good, so this note is itself under a chain.
+    """
+    start = ChainHead(table.name, 0, GENESIS)
+    if table is not alarm_event:
+        return start
+    query = select(log_note.c.text).where(log_note.c.person == "").order_by(log_note.c.seq)
+    for text in connection.execute(query).scalars():
+        if text.startswith(REMOVED):
+            found = json.loads(text.removeprefix(REMOVED))
+            if found["table"] == table.name:
+                start = ChainHead(table.name, int(found["to_seq"]), str(found["hash"]))
+    return start
+
+
+def _file_findings(connection: Connection) -> Iterator[str]:
+    for (line,) in connection.exec_driver_sql("PRAGMA integrity_check(20)"):
+        if line != "ok":
+            yield f"database file: {line}"
+    for row in connection.exec_driver_sql("PRAGMA foreign_key_check").fetchmany(20):
+        yield f"{row[0]}: a row refers to a missing row of {row[2]}"
+
+
+def _description_findings(connection: Connection) -> Iterator[str]:
+    for row in connection.execute(select(description)):
+        if hashlib.sha256(row.content).hexdigest() != row.sha256:
+            yield f"description {row.sha256[:12]}: changed after it was written"
+    query = select(
+        action_applied.c.seq, action_applied.c.at_us, person_action.c.at_us.label("asked")
+    )
+    for row in connection.execute(query.join(person_action)):
+        if row.at_us < 0 or row.asked < 0:
+            yield f"person_action row {row.seq}: applied or asked before 1970"
+
+
+def _limited(lines: Iterator[str]) -> list[str]:
+    found = list(lines)
+    if len(found) <= _SHOWN:
+        return found
+    return [*found[:_SHOWN], f"… and {len(found) - _SHOWN} more"]
