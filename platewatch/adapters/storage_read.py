@@ -45,16 +45,7 @@ from .storage_tables import (
 )
 
 _FLAGS = {number: Flag(number) for number in range(32)}
-# All others are numbers that may be stored as NULL.
-_PEAK_AS_STORED = {
-    "at_us",
-    "now_zone",
-    "ahead_zone",
-    "cause",
-    "limit_degC",
-    "p_over",
-    "to_limit_s",
-}
+_PEAK_OPTIONAL = {"limit_degC", "p_over", "to_limit_s"}
 
 
 @dataclass(frozen=True, slots=True)
@@ -296,9 +287,9 @@ def _or_nan(value: float | None) -> float:
 
 
 def _peak(row: Row[Any]) -> PeakRow:
-    names = (f.name for f in fields(PeakRow))
-    found = ((name, row._mapping[name]) for name in names)
-    return PeakRow(**{k: v if k in _PEAK_AS_STORED else _or_nan(v) for k, v in found})
+    stored = {f.name: row._mapping[f.name] for f in fields(PeakRow)}
+    missing = {k for k, v in stored.items() if v is None} - _PEAK_OPTIONAL
+    return PeakRow(**(stored | dict.fromkeys(missing, math.nan)))
 
 
 def _action(row: Row[Any]) -> AppliedAction:
