@@ -65,3 +65,22 @@ def from_iso(text: str) -> int:
         raise ValueError(f"{text!r} has no offset; add Z or +hh:mm")
     delta = stamp - EPOCH
     return (delta.days * 86_400 + delta.seconds) * 1_000_000 + delta.microseconds
+
+
+PLAUSIBLE: dict[str, tuple[float, float]] = {
+    "degC": (ABSOLUTE_ZERO_DEGC, 3000.0),
+    "degF": (-459.67, 5432.0),
+    "K": (0.0, 3273.15),
+    "mV": (-20.0, 100.0),  # wider than any thermocouple of IEC 60584-1
+    "ohm": (0.0, 10_000.0),
+    "mA": (-1.0, 30.0),
+    "1": (-0.001, 1.001),  # duty; 45 on a 0..1 channel is a wrong scale, not a heater
+    "%": (-0.1, 100.1),
+}
+"""What a channel of this unit can carry at all; anything outside is refused."""
+
+
+def plausible(value: float, unit: str) -> bool:
+    """False for what cannot be a value of this unit, NaN and the infinities included."""
+    low, high = PLAUSIBLE.get(unit, (-1e300, 1e300))
+    return low <= value <= high
