@@ -15,6 +15,7 @@ B = -5.775e-7  # 1/K2
 C = -4.183e-12  # 1/K4, below 0 degC only
 RANGE_degC = (-200.0, 850.0)
 
+_ROUNDING_OHM = 1e-9  # the ends of the range belong to it
 _LONGEST_SEARCH = 20  # Newton on a nearly straight line settles in four
 
 
@@ -38,7 +39,7 @@ def temperature_degC(ohm: Array | float) -> Array:
         t = t - step
         if np.abs(step).max(initial=0.0) < 1e-10:
             break
-    return np.where(inside, t, np.nan)
+    return np.where(inside, np.clip(t, *RANGE_degC), np.nan)
 
 
 def _curve(t: Array) -> tuple[Array, Array]:

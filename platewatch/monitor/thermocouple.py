@@ -24,6 +24,7 @@ _READABLE_FROM_degC = {"B": 50.0}
 
 _KNOT_SPACING_K = 1.0
 _SETTLED_K = 1e-9
+_ROUNDING_mV = 1e-9  # the ends of the range belong to it
 _LONGEST_SEARCH = 60  # halvings of one kelvin reach 1e-18 K
 
 
@@ -61,10 +62,10 @@ def temperature_degC(
     to the voltage before it is inverted.  NaN where that leaves the range.
     """
     emf = np.asarray(mV, dtype=np.float64) + emf_mV(letter, cold_junction_degC)
-    knots, table = _knots(letter)
+    table = _knots(letter)[1]
     answer = np.full(emf.shape, np.nan)
-    inside = (emf >= table[0]) & (emf <= table[-1])
-    wanted = emf[inside]
+    inside = (emf >= table[0] - _ROUNDING_mV) & (emf <= table[-1] + _ROUNDING_mV)
+    wanted = np.clip(emf[inside], table[0], table[-1])
     if wanted.size:
         answer[inside] = _solve(letter, wanted)
     return answer
@@ -89,9 +90,9 @@ def why_not(letter: str, mV: float, cold_junction_degC: float = 0.0) -> str:
         )
     emf = mV + at_terminals
     knots, table = _knots(letter)
-    if emf > table[-1]:
+    if emf > table[-1] + _ROUNDING_mV:
         return f"{emf:.3f} mV is more than the {table[-1]:.3f} mV of type {letter} at {high:g} degC"
-    if emf < table[0]:
+    if emf < table[0] - _ROUNDING_mV:
         low = knots[0]
         return f"{emf:.3f} mV is less than the {table[0]:.3f} mV of type {letter} at {low:g} degC"
     return ""
