@@ -12,11 +12,12 @@ from dataclasses import dataclass
 from enum import StrEnum
 from pathlib import Path
 
-from platewatch.adapters import settings_rules
+from platewatch.adapters import settings_places, settings_rules
 from platewatch.adapters import settings_schema_plate as plate_tables
 from platewatch.adapters import settings_schema_run as run_tables
-from platewatch.adapters.settings_convert import Converter, metres, shape
+from platewatch.adapters.settings_convert import Converter, cause_name, metres, shape
 from platewatch.adapters.settings_draft import Draft, draft, parse, read_bytes
+from platewatch.adapters.settings_schema_sensor import SensorEntry
 from platewatch.errors import SettingsError
 from platewatch.monitor.limits import AlarmLimit
 from platewatch.monitor.options import CauseOptions, EstimatorOptions, ForecastOptions
@@ -128,7 +129,7 @@ def load(path: Path) -> Description:
     content = read_bytes(path)
     text = parse(path, content)
     read, mistakes = draft(text)
-    mistakes += settings_rules.mistakes(read)
+    mistakes += [*settings_rules.mistakes(read), *settings_places.mistakes(read)]
     if mistakes:
         sentences = sorted({text.sentence(mistake) for mistake in mistakes})
         raise SettingsError("\n".join(sentence for _, sentence in sentences))
@@ -136,7 +137,9 @@ def load(path: Path) -> Description:
 
 
 def _description(path: Path, sha256: str, read: Draft) -> Description:
-    convert = Converter(read.unit, BUILT_IN)
+    zones = [zone for _, zone in read.of(plate_tables.ZoneEntry)]
+    controlling = frozenset(zone.loop.sensor for zone in zones if zone.loop is not None)
+    convert = Converter(read.unit, BUILT_IN, controlling)
     recipes = tuple(convert.recipe(entry) for _, entry in read.of(run_tables.RecipeEntry))
     plate = _plate(read, convert, recipes)
     limits = read.of(run_tables.AlarmLimitEntry)
@@ -188,7 +191,7 @@ def _plate(read: Draft, convert: Converter, recipes: tuple[Recipe, ...]) -> Plat
         clamps=tuple(convert.clamp(e) for _, e in read.of(plate_tables.ClampEntry)),
         contacts=tuple(convert.contact(e) for _, e in read.of(plate_tables.ContactEntry)),
         zones=tuple(convert.zone(e) for _, e in read.of(plate_tables.ZoneEntry)),
-        sensors=tuple(convert.sensor(e) for _, e in read.of(plate_tables.SensorEntry)),
+        sensors=tuple(convert.sensor(e) for _, e in read.of(SensorEntry)),
         uncertain=Uncertain(**uncertain.model_dump()),
         reference_degC=sum(set_points) / len(set_points) if set_points else None,
     )
@@ -214,7 +217,10 @@ def _forecast(read: Draft) -> ForecastOptions:
 
 def _causes(read: Draft) -> CauseOptions:
     entry = read.one(run_tables.CausesEntry) or run_tables.CausesEntry()
-    return CauseOptions(off=tuple(entry.off), prior=tuple(entry.prior.items()))
+    return CauseOptions(
+        off=tuple(cause_name(name) for name in entry.off),
+        prior=tuple((cause_name(name), rate) for name, rate in entry.prior.items()),
+    )
 
 
 def _bus(read: Draft, plate: str) -> BusSettings:

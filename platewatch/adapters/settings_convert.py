@@ -9,7 +9,9 @@ from typing import TypeVar
 
 from platewatch.adapters import settings_schema_plate as plate_tables
 from platewatch.adapters import settings_schema_run as run_tables
+from platewatch.adapters.settings_schema_sensor import SensorEntry
 from platewatch.monitor.limits import AlarmLimit, LimitKind, Priority
+from platewatch.monitor.options import CAUSE_NAMES
 from platewatch.monitor.recipe import Do, Recipe, Step
 from platewatch.thermal.plate import (
     Ambient,
@@ -46,6 +48,12 @@ def metres(mm: float) -> float:
     return mm / 1000.0
 
 
+def cause_name(word: str) -> str:
+    """The catalogue's name: `zone-not-heating` and `loose` are understood, too."""
+    name = word.strip().lower().replace("-", " ").replace("_", " ")
+    return f"sensor {name}" if f"sensor {name}" in CAUSE_NAMES else name
+
+
 def shape(entry: plate_tables.ShapeEntry, *, outline: bool = False) -> Shape:
     """A complete shape entry in metres.
 
@@ -70,6 +78,7 @@ class Converter:
 
     unit: TemperatureUnit
     built_in: Mapping[str, Material]
+    controlling: frozenset[str] = frozenset()  # sensors that a loop names
 
     def degC(self, value: float) -> float:
         return to_degC(value, self.unit)
@@ -147,7 +156,7 @@ class Converter:
             where=entry.where,
         )
 
-    def sensor(self, entry: plate_tables.SensorEntry) -> Sensor:
+    def sensor(self, entry: SensorEntry) -> Sensor:
         span = entry.span
         return Sensor(
             name=entry.name,
@@ -166,9 +175,14 @@ class Converter:
             calibrated_on=entry.calibrated_on,
             due_on=entry.due_on,
             certificate=entry.certificate,
-            role=Role(entry.role),
+            role=self._role(entry),
             where=entry.where,
         )
+
+    def _role(self, entry: SensorEntry) -> Role:
+        if entry.role is not None:
+            return Role(entry.role)
+        return Role.CONTROL if entry.name in self.controlling else Role.MONITOR
 
     def recipe(self, entry: run_tables.RecipeEntry) -> Recipe:
         return Recipe(entry.name, tuple(self._step(step) for step in entry.steps))

@@ -20,6 +20,7 @@ from platewatch.adapters import settings_schema_plate as plate_tables
 from platewatch.adapters import settings_schema_run as run_tables
 from platewatch.adapters.settings_lines import Where, key_lines
 from platewatch.adapters.settings_schema import Entry, Mistake, suggest
+from platewatch.adapters.settings_schema_sensor import SensorEntry
 from platewatch.errors import SettingsError
 from platewatch.units import TemperatureUnit
 
@@ -42,7 +43,7 @@ MANY: dict[str, type[Entry]] = {
     "clamp": plate_tables.ClampEntry,
     "contact": plate_tables.ContactEntry,
     "zone": plate_tables.ZoneEntry,
-    "sensor": plate_tables.SensorEntry,
+    "sensor": SensorEntry,
     "recipe": run_tables.RecipeEntry,
     "alarm_limit": run_tables.AlarmLimitEntry,
     "channel": run_tables.ChannelEntry,

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import datetime as dt
 import itertools
 from collections.abc import Iterator
 from typing import Annotated, Any
@@ -14,12 +13,11 @@ from platewatch.adapters.settings_schema import (
     Mistake,
     OneOf,
     SurroundChannel,
-    Temperature,
     TopicName,
     Within,
     a_number,
 )
-from platewatch.thermal.plate import Correlation, DutyLaw, EdgeKind, LoopForm, Role, Side
+from platewatch.thermal.plate import Correlation, DutyLaw, EdgeKind, LoopForm, Side
 from platewatch.units import TemperatureUnit
 
 Points = list[tuple[float, float]]
@@ -30,21 +28,6 @@ _SHAPE_KEYS = {
     "polygon": ("points_mm",),
 }
 _PLACE_KEYS = ("x_mm", "y_mm")
-
-THERMOCOUPLES = ("K", "J", "T", "N", "E", "S", "R", "B")
-SIGNALS = ("degC", "degF", "K", "mV", "ohm", "mA")
-TOLERANCE_CLASSES = {
-    # IEC 60584-1:2013, table of tolerance classes; IEC 60751:2022 for pt100.
-    **dict.fromkeys(("K", "N", "E", "T"), ("1", "2", "3")),
-    "J": ("1", "2"),
-    **dict.fromkeys(("R", "S"), ("1", "2")),
-    "B": ("2", "3"),
-    "pt100": ("AA", "A", "B", "C"),
-}
-_SAFETY = (
-    "platewatch is no safety function and must not stand in for one",
-    'write "control" or "monitor"; a limiter has its own sensor and its own cut-off',
-)
 
 
 def _pairs(value: Any, what: str, least: int) -> Points:
@@ -64,29 +47,14 @@ def _ambient(value: Any) -> float | str:
     return value if isinstance(value, str) else a_number(value)
 
 
-def _class_word(value: Any) -> Any:
-    return str(value) if isinstance(value, int) and not isinstance(value, bool) else value
-
-
-def _date(value: Any) -> str:
-    if isinstance(value, dt.date) and not isinstance(value, dt.datetime):
-        return value.isoformat()
-    try:
-        return dt.date.fromisoformat(value).isoformat()
-    except (TypeError, ValueError):
-        raise ValueError(f"{value!s} is not a date; write 2026-03-31") from None
-
-
 Property = Annotated[float | Points, PlainValidator(_property)]
 Place = Annotated[float | None, Within(-1e5, 1e5, "give it in millimetres")]
 Size = Annotated[float | None, Within(0, 2e4, "give a positive length in millimetres", above=True)]
 AmbientValue = Annotated[float | str, PlainValidator(_ambient), SurroundChannel()]
 AmbientOption = Annotated[float | str | None, PlainValidator(_ambient), SurroundChannel()]
-DateText = Annotated[str, PlainValidator(_date)]
-Thickness = Annotated[
-    float | None,
-    Within(0, 500, "give the thickness in millimetres, above 0 and at most 500", above=True),
-]
+_THICKNESS = Within(
+    0, 500, "give the thickness in millimetres, above 0 and at most 500", above=True
+)
 Emissivity = Annotated[
     float | None, Within(0, 1, "an emissivity lies between 0 and 1 (0.1 bright, 0.9 painted)")
 ]
@@ -125,6 +93,14 @@ class ShapeEntry(Entry):
             yield Mistake(
                 (key,), f"says nothing about a {self.shape}", f"use {', '.join(allowed[:-1])}"
             )
+        for number, corner in enumerate(self.points_mm or ()):
+            before = (self.points_mm or ())[number - 1]
+            if corner == before:
+                yield Mistake(
+                    ("points_mm", number),
+                    f"corner {number + 1} repeats the corner before it (the last closes by itself)",
+                    "leave it out",
+                )
 
 
 def _as_list(value: Any) -> Any:
@@ -139,7 +115,7 @@ class PlateEntry(Entry):
     unit: Annotated[str, OneOf(tuple(TemperatureUnit))] = "degC"
     outline: ShapeEntry
     holes: list[ShapeEntry] = Field(default_factory=list)
-    thickness_mm: Annotated[float, *Thickness.__metadata__]
+    thickness_mm: Annotated[float, _THICKNESS]
     material: str
     cell_mm: Size = None
     working_margin_mm: Annotated[
@@ -210,14 +186,12 @@ class FaceEntry(Entry):
                 "has no meaning without forced convection",
                 'write correlation = "forced" or leave it out',
             )
-        if self.coefficient is not None and self.correlation is None:
-            for key in ("emissivity", "surroundings"):
-                if key == "surroundings" and self.surroundings is not None:
-                    yield Mistake(
-                        (key,),
-                        "has no meaning beside a coefficient, which is the whole loss",
-                        "use a correlation, or leave it out",
-                    )
+        if self.correlation is None and self.surroundings is not None:
+            yield Mistake(
+                ("surroundings",),
+                "has no meaning beside a coefficient, which is the whole loss",
+                "use a correlation, or leave it out",
+            )
 
 
 class SurfaceEntry(Entry):
@@ -272,22 +246,22 @@ class ContactEntry(Entry):
     name: Annotated[str, TopicName()]
     shape: ShapeEntry
     conductance: Annotated[
-        float, Within(0, 1e5, "give the contact conductance in W/m2K (dry 200 to 1000)", True)
+        float, Within(0, 1e5, "give the contact conductance in W/m2K (dry 200 to 1000)", above=True)
     ]
     heat_capacity: Annotated[
-        float, Within(0, 1e8, "give mass times specific heat, J/K, above 0", True)
+        float, Within(0, 1e8, "give mass times specific heat, J/K, above 0", above=True)
     ]
 
 
 class LayerEntry(Entry):
     material: str
-    thickness_mm: Annotated[float, *Thickness.__metadata__]
+    thickness_mm: Annotated[float, _THICKNESS]
 
 
 class InsetEntry(Entry):
     shape: ShapeEntry
     material: str | None = None
-    thickness_mm: Thickness = None
+    thickness_mm: Annotated[float | None, _THICKNESS] = None
 
     def mistakes(self) -> Iterator[Mistake]:
         if self.material is None and self.thickness_mm is None:
@@ -345,86 +319,6 @@ class ZoneEntry(Entry):
                 ("duty_exponent",),
                 'belongs to duty_law "power" and only to it',
                 'write duty_law = "power" and duty_exponent = n together',
-            )
-
-
-class SensorEntry(Entry):
-    name: Annotated[str, TopicName()]
-    x_mm: float
-    y_mm: float
-    element: Annotated[str | None, OneOf((*THERMOCOUPLES, "pt100"))] = None
-    signal: Annotated[str, OneOf(SIGNALS)] = "degC"
-    span: Annotated[list[float] | None, Temperature()] = None
-    tolerance_class: Annotated[str | None, BeforeValidator(_class_word)] = None
-    lag_s: Annotated[float, Within(0, 3600, "give the sensor's lag in s, 0 or more")] = 0.0
-    noise: Annotated[
-        float, Within(0, 50, "give the standard deviation of its noise, above 0", above=True)
-    ] = 0.2
-    quantum: Annotated[float, Within(0, 50, "give the rounding step, 0 for none")] = 0.0
-    cold_junction: AmbientOption = None
-    junction_block: str = ""
-    correction: Annotated[float, Within(-100, 100, "give what is added to the reading")] = 0.0
-    calibrated_on: DateText = ""
-    due_on: DateText = ""
-    certificate: str = ""
-    role: Annotated[
-        str, OneOf(tuple(Role), dict.fromkeys(("safety", "limiter", "trip"), _SAFETY))
-    ] = "monitor"
-    where: str = ""
-
-    def mistakes(self) -> Iterator[Mistake]:
-        yield from self._signal_mistakes()
-        yield from self._class_mistakes()
-        if self.due_on and self.calibrated_on and self.due_on < self.calibrated_on:
-            yield Mistake(
-                ("due_on",),
-                f"{self.due_on} lies before calibrated_on {self.calibrated_on}",
-                "correct the dates",
-            )
-
-    def _signal_mistakes(self) -> Iterator[Mistake]:
-        couple = self.element in THERMOCOUPLES
-        if self.signal == "mA" and self.span is None:
-            yield Mistake(
-                ("span",),
-                "is missing for a mA signal",
-                "add span = [temperature at 4 mA, temperature at 20 mA]",
-            )
-        if self.signal != "mA" and self.span is not None:
-            yield Mistake(("span",), "belongs to a mA signal only", "leave it out")
-        if self.span is not None and (len(self.span) != 2 or self.span[0] >= self.span[-1]):
-            yield Mistake(("span",), "is not [low, high] with low below high", "correct it")
-        if self.signal in ("mV", "ohm") and self.element is None:
-            yield Mistake(
-                ("element",), f"is missing for a signal in {self.signal}", 'add element = "K" ...'
-            )
-        if self.signal == "mV" and self.element == "pt100":
-            yield Mistake(("signal",), "a pt100 gives no mV", 'write signal = "ohm" or "degC"')
-        if self.signal == "ohm" and couple:
-            yield Mistake(
-                ("signal",), f"a type {self.element} thermocouple gives no ohm", 'write "mV"'
-            )
-        if self.signal == "mV" and couple and self.cold_junction is None:
-            yield Mistake(
-                ("cold_junction",),
-                "is missing for a signal in mV",
-                'add cold_junction = a temperature or a channel such as "surround/cabinet"',
-            )
-
-    def _class_mistakes(self) -> Iterator[Mistake]:
-        word = self.tolerance_class
-        if word is None:
-            return
-        if self.element is None:
-            yield Mistake(("element",), "is missing for a tolerance class", 'add element = "K" ...')
-            return
-        possible = TOLERANCE_CLASSES.get(self.element)
-        if possible is not None and word not in possible:
-            norm = "IEC 60751" if self.element == "pt100" else "IEC 60584-1"
-            yield Mistake(
-                ("tolerance_class",),
-                f"{norm} knows no class {word} for {self.element}",
-                f"use {' or '.join(possible)}, or leave it out",
             )
 
 

@@ -42,6 +42,7 @@ class Polygon:
 
 
 Shape = Rectangle | Circle | Polygon
+Area = shapely.Polygon  # what `geometry` makes of a shape
 
 
 def geometry(shape: Shape) -> shapely.Polygon:
