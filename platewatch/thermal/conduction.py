@@ -17,25 +17,11 @@ from scipy.sparse import coo_array, csc_array, csr_array, diags_array
 from scipy.sparse.linalg import splu
 
 from platewatch.errors import PlateError
-from platewatch.thermal.grid import Grid, footprint, point_row
-from platewatch.thermal.losses import (
-    forced,
-    natural_down,
-    natural_up,
-    radiation_flux,
-    radiation_slope,
-)
-from platewatch.thermal.plate import (
-    Ambient,
-    Correlation,
-    Edge,
-    EdgeKind,
-    Material,
-    Plate,
-    Surface,
-    geometry,
-)
-from platewatch.thermal.stepping import integrate
+from platewatch.thermal.faces import Face, Stack, build_stack
+from platewatch.thermal.grid import Grid, footprint
+from platewatch.thermal.plate import Ambient, Correlation, Edge, EdgeKind, Plate
+from platewatch.thermal.rim import Ints
+from platewatch.thermal.stepping import integrate, lu
 from platewatch.types import Array
 
 NOMINAL_AMBIENT_DEGC = 22.0  # of a bus channel, where losses are linearised
@@ -67,76 +53,30 @@ class Input:
 
 
 @dataclass(frozen=True, eq=False)
-class Face:
-    """One loaded side of the plate.
+class SideLinks:
+    """Links of cells to temperature inputs: rim pieces, then clamps.
 
-    ambient, surroundings: numbers of inputs;  length_m: of the correlation
-    flux(T, T_amb, T_sur) W/m2, of the shape of T
+    cell, into (p,): which cell, which input
+    section_m2 (p,): rim length x thickness;  film (p,): 1/h m2K/W;  s_m (p,)
+    fixed (p,) W/K: of a clamp, 0 for a rim piece
     """
 
-    surface: Surface
-    ambient: int
-    surroundings: int
-    emissivity: Array  # (n,), 0 where the coefficient is the whole loss
-    length_m: float
+    cell: Ints
+    into: Ints
+    section_m2: Array
+    film: Array
+    s_m: Array
+    closest_m: float
+    fixed: Array
 
-    @property
-    def is_linear(self) -> bool:
-        return self.surface.correlation is None and not np.any(self.emissivity)
+    def conductance(self, k: Array) -> Array:
+        """W/K of each link at the conductivity k (p,) W/mK between cell and rim.
 
-    def convection(self, T: Array, T_amb: float) -> Array:
-        """W/m2 at the temperatures T, degC."""
-        surface = self.surface
-        match surface.correlation:
-            case None:
-                h: Array | float = surface.coefficient or 0.0
-            case Correlation.NATURAL_UP:
-                h = natural_up(T, T_amb, self.length_m)
-            case Correlation.NATURAL_DOWN:
-                h = natural_down(T, T_amb, self.length_m)
-            case Correlation.FORCED:
-                h = forced(surface.speed_m_s or 0.0, T, T_amb, self.length_m)
-        return h * (T - T_amb)
-
-    def flux(self, T: Array, u: Array, emissivity: Array | None = None) -> Array:
-        """Loss, W/m2; emissivity of the places of T where these are not the cells."""
-        grey = self.emissivity if emissivity is None else emissivity
-        lost = self.convection(T, u[self.ambient])
-        if self.is_linear:
-            return lost
-        return lost + radiation_flux(grey, T, u[self.surroundings])
-
-    def slopes(self, T: Array, u: Array) -> tuple[Array, Array, Array]:
-        """Derivatives of the flux by T, ambient and surroundings, W/m2K."""
-        step, T_amb = 1e-3, float(u[self.ambient])
-        by_T = (self.convection(T + step, T_amb) - self.convection(T - step, T_amb)) / (2 * step)
-        by_amb = (self.convection(T, T_amb + step) - self.convection(T, T_amb - step)) / (2 * step)
-        by_T = by_T + radiation_slope(self.emissivity, T)
-        by_sur = -radiation_slope(self.emissivity, u[self.surroundings])
-        return by_T, by_amb, by_sur
-
-
-@dataclass(frozen=True, eq=False)
-class Stack:
-    """What lies under each cell, (n,): area fractions of the materials through all layers.
-
-    fraction (n, m): of a cell's area, thickness (m,) included in `thickness_m` products
-    """
-
-    parts: tuple[tuple[Material, Array], ...]  # material, its volume per area (n,) m
-    thickness_m: Array  # (n,)
-
-    def sheet_conductance(self, T: Array | float) -> Array:
-        """k d, W/K, at the temperatures T (n,) degC."""
-        return np.sum([m.k.at(T) * depth for m, depth in self.parts], axis=0)
-
-    def heat_capacity(self, T: Array | float) -> Array:
-        """rho cp d, J/m2K, at the temperatures T (n,) degC."""
-        return np.sum([m.rho * m.cp.at(T) * depth for m, depth in self.parts], axis=0)
-
-    @property
-    def is_constant(self) -> bool:
-        return all(m.k.is_constant and m.cp.is_constant for m, _ in self.parts)
+        The signed distance makes a disc converge at second order; with plain h L it
+        would be first order, see verification/test_cut_cells.py.
+        """
+        resistance = np.maximum(self.film + self.s_m / k, self.closest_m / k)
+        return self.fixed + self.section_m2 / resistance
 
 
 @dataclass(frozen=True, eq=False)
@@ -145,7 +85,7 @@ class ThermalModel:
 
     capacity (n,) J/K;  K (n, n) W/K, symmetric;  B (n, m) W per unit of input
     inputs: m of them;  offset (n,) W: the constant of the linearised losses
-    faces: the two sides, for the exact loss;  face_area (n,) m2
+    stack, faces, sides: what it is made of, for the full equations
     """
 
     plate: Plate
@@ -158,6 +98,7 @@ class ThermalModel:
     reference_degC: float
     stack: Stack
     faces: tuple[Face, ...]
+    sides: SideLinks
 
     @cached_property
     def has_loss(self) -> bool:
@@ -187,8 +128,7 @@ class ThermalModel:
 def static_solver(K: csr_array, capacity: Array, has_loss: bool) -> Callable[[Array], Array]:
     """Factor K once.  Without any loss, K w = q - C 1 (1'q)/(1'C 1) with w'C 1 = 0."""
     if has_loss:
-        solve: Callable[[Array], Array] = splu(csc_array(K)).solve
-        return solve
+        return lu(K)
     n, scale = capacity.size, float(np.abs(K.diagonal()).mean())
     border = (capacity * (scale / capacity.mean()))[:, None]
     bordered = np.arange(n), np.full(n, n)
@@ -196,11 +136,12 @@ def static_solver(K: csr_array, capacity: Array, has_loss: bool) -> Callable[[Ar
     rows = np.concatenate((coo.row, *bordered))
     columns = np.concatenate((coo.col, *bordered[::-1]))
     values = np.concatenate((coo.data, border[:, 0], border[:, 0]))
-    factors = splu(csc_array(coo_array((values, (rows, columns)), shape=(n + 1, n + 1))))
+    bordered_K = coo_array((values, (rows, columns)), shape=(n + 1, n + 1))
+    solve = splu(csc_array(bordered_K)).solve  # not definite: pivoting is needed
 
     def solve_balanced(q: Array) -> Array:
         padded = np.concatenate((q, np.zeros_like(q[:1])))
-        answer: Array = factors.solve(padded)[:n]
+        answer: Array = solve(padded)[:n]
         return answer
 
     return solve_balanced
@@ -215,17 +156,15 @@ def build_model(plate: Plate, grid: Grid, reference_degC: float) -> ThermalModel
     """
     inputs = _inputs(plate)
     number = {each.name: i for i, each in enumerate(inputs)}
-    stack = _stack(plate, grid)
+    stack = build_stack(plate, grid)
     B = np.zeros((grid.n, len(inputs)))
-    for zone_no, zone in enumerate(plate.zones):
-        B[:, zone_no] = _zone_share(grid, plate, zone_no, zone.name)
+    for zone_no in range(len(plate.zones)):
+        B[:, zone_no] = _zone_share(plate, grid, zone_no)
+    sides = _side_links(plate, grid, stack, number)
+    link = sides.conductance(stack.conductivity(reference_degC)[sides.cell])
     diagonal, offset = np.zeros(grid.n), np.zeros(grid.n)
-    rim_cell, rim_link, rim_input = _rim_links(plate, grid, stack, number, reference_degC)
-    np.add.at(diagonal, rim_cell, rim_link)
-    np.add.at(B, (rim_cell, rim_input), rim_link)
-    for cells, share, into in _clamps(plate, grid, number):
-        np.add.at(diagonal, cells, share)
-        np.add.at(B[:, into], cells, share)
+    np.add.at(diagonal, sides.cell, link)
+    np.add.at(B, (sides.cell, sides.into), link)
     faces = _faces(plate, grid, number)
     reference = np.full(grid.n, reference_degC)
     nominal = np.array([each.nominal for each in inputs])
@@ -250,6 +189,7 @@ def build_model(plate: Plate, grid: Grid, reference_degC: float) -> ThermalModel
         reference_degC,
         stack,
         faces,
+        sides,
     )
 
 
@@ -266,7 +206,7 @@ def conduction_matrix(grid: Grid, sheet_conductance: Array) -> csr_array:
 
 def loss_watts(model: ThermalModel, T: Array, u: Array) -> Array:
     """What both faces really lose, (n,) W, at cell temperatures T (n,) and inputs u (m,)."""
-    flux = np.sum([face.flux(T, u) for face in model.faces], axis=0)
+    flux: Array = np.sum([face.flux(T, u) for face in model.faces], axis=0)
     return model.grid.area * flux
 
 
@@ -341,10 +281,11 @@ def transient(
     u: inputs (m,), or a function of the time in seconds;  extra: heat (n,) W
     """
     added = model.offset + (0.0 if extra is None else extra)
-    drive = u if callable(u) else lambda _t, held=np.asarray(u): held
 
     def rate(t: float, T: Array) -> Array:
-        return model.B @ drive(t) + added - model.K @ T
+        drive: Array = u(t) if callable(u) else u
+        q: Array = model.B @ drive + added - model.K @ T
+        return q
 
     return integrate(
         model.capacity, rate, lambda _t, _T: model.K, initial, times_s, tolerance_K, linear=True
@@ -374,52 +315,35 @@ def _constant(ambient: Ambient) -> float | None:
     return None if isinstance(ambient, str) else float(ambient)
 
 
-def _stack(plate: Plate, grid: Grid) -> Stack:
-    """Insets replace the base plate where they lie; later ones win; layers lie everywhere."""
-    base = np.ones(grid.n)
-    parts: list[tuple[Material, Array]] = []
-    for number, inset in enumerate(plate.insets):
-        region = geometry(inset.shape)
-        for later in plate.insets[number + 1 :]:
-            region = region.difference(geometry(later.shape))
-        share = footprint(grid, region) / grid.area
-        base = base - share
-        parts.append(
-            (inset.material or plate.material, share * (inset.thickness_m or plate.thickness_m))
-        )
-    parts.insert(0, (plate.material, np.clip(base, 0, 1) * plate.thickness_m))
-    parts += [(layer.material, np.full(grid.n, layer.thickness_m)) for layer in plate.layers]
-    return Stack(tuple(parts), np.sum([depth for _, depth in parts], axis=0))
-
-
-def _zone_share(grid: Grid, plate: Plate, zone_no: int, name: str) -> Array:
-    covered = np.sum([footprint(grid, shape) for shape in plate.zones[zone_no].shapes], axis=0)
+def _zone_share(plate: Plate, grid: Grid, zone_no: int) -> Array:
+    zone = plate.zones[zone_no]
+    covered: Array = np.sum([footprint(grid, shape) for shape in zone.shapes], axis=0)
     if covered.sum() <= 0:
-        raise PlateError(f"zone {name!r} does not lie on the plate; correct its shape")
-    share: Array = covered / covered.sum()
-    return share
+        raise PlateError(f"zone {zone.name!r} does not lie on the plate; correct its shape")
+    return covered / covered.sum()
 
 
-def _rim_links(
-    plate: Plate, grid: Grid, stack: Stack, number: dict[str, int], reference_degC: float
-) -> tuple[Array, Array, Array]:
-    """Cells, links W/K and inputs of the rim that is not insulated.
-
-    The signed distance makes a disc converge at second order; with plain h L it
-    would be first order, see verification/test_cut_cells.py.
-    """
+def _side_links(plate: Plate, grid: Grid, stack: Stack, number: dict[str, int]) -> SideLinks:
+    """The rim that is not insulated, and the clamps."""
     rim = grid.rim
     active = np.array([e.kind is not EdgeKind.INSULATED for e in plate.edges] + [False])[rim.edge]
-    cell, length, s = rim.cell[active], rim.length_m[active], rim.s_m[active]
     edges = [plate.edges[k] for k in rim.edge[active]]
-    d = stack.thickness_m[cell]
-    k = stack.sheet_conductance(reference_degC)[cell] / d
+    d = stack.thickness_m[rim.cell[active]]
     h = np.array([_edge_coefficient(e, depth) for e, depth in zip(edges, d, strict=True)])
     with np.errstate(divide="ignore"):
         film = np.where(h > 0, 1 / h, np.inf)
-    resistance = np.maximum(film + s / k, CLOSEST_RIM * min(grid.hx, grid.hy) / k)
-    into = np.array([number[_ambient_name(_edge_ambient(plate, e))] for e in edges], dtype=int)
-    return cell, length * d / resistance, into
+    into = [number[_ambient_name(_edge_ambient(plate, e))] for e in edges]
+    cells, fixed, clamp_into = _clamps(plate, grid, number)
+    none = np.zeros(len(cells))
+    return SideLinks(
+        np.concatenate((rim.cell[active], np.array(cells, dtype=np.int64))),
+        np.array(into + clamp_into, dtype=np.int64),
+        np.concatenate((rim.length_m[active] * d, none)),
+        np.concatenate((film, none + 1)),
+        np.concatenate((rim.s_m[active], none)),
+        CLOSEST_RIM * min(grid.hx, grid.hy),
+        np.concatenate((np.zeros(d.size), fixed)),
+    )
 
 
 def _edge_coefficient(edge: Edge, thickness_m: float) -> float:
@@ -437,20 +361,24 @@ def _edge_ambient(plate: Plate, edge: Edge) -> Ambient:
     return plate.top.ambient if edge.ambient is None else edge.ambient
 
 
-def _clamps(plate: Plate, grid: Grid, number: dict[str, int]) -> list[tuple[Array, Array, int]]:
-    """Cells, W/K and input of every clamp; spread over the cells that tell its temperature.
-
-    Weights of an interpolation may be negative; those would make K lose its diagonal
-    dominance, so only the positive ones take part.
-    """
-    links = []
+def _clamps(
+    plate: Plate, grid: Grid, number: dict[str, int]
+) -> tuple[list[int], list[float], list[int]]:
+    """Cells, W/K and input of every clamp, shared by distance among up to four cells."""
+    cells: list[int] = []
+    links: list[float] = []
+    into: list[int] = []
     for clamp in plate.clamps:
-        weights = np.maximum(point_row(grid, clamp.x_m, clamp.y_m), 0)
-        cells = np.flatnonzero(weights)
-        share = clamp.w_per_k * weights[cells] / weights.sum()
+        away_x, away_y = np.abs(grid.x - clamp.x_m) / grid.hx, np.abs(grid.y - clamp.y_m) / grid.hy
+        share = np.maximum(1 - away_x, 0) * np.maximum(1 - away_y, 0)
+        if share.sum() <= 0:
+            share[np.argmin(np.hypot(away_x, away_y))] = 1.0
+        touched = np.flatnonzero(share)
         ambient = plate.top.ambient if clamp.ambient is None else clamp.ambient
-        links.append((cells, share, number[_ambient_name(ambient)]))
-    return links
+        cells += touched.tolist()
+        links += (clamp.w_per_k * share[touched] / share.sum()).tolist()
+        into += [number[_ambient_name(ambient)]] * touched.size
+    return cells, links, into
 
 
 def _faces(plate: Plate, grid: Grid, number: dict[str, int]) -> tuple[Face, ...]:
@@ -469,7 +397,7 @@ def _faces(plate: Plate, grid: Grid, number: dict[str, int]) -> tuple[Face, ...]
                 surface,
                 number[_ambient_name(surface.ambient)],
                 number[_ambient_name(beyond)],
-                np.full(grid.n, 0.0 if whole else grey),
+                0.0 if whole else grey,
                 length,
             )
         )

@@ -1,8 +1,9 @@
 """A few modes instead of thousands of cells: T = V a, with da/dt = -rates a + G u + g0.
 
-Ritz modes: the constant field, the static response to every input and the slowest
-eigenmodes of the plate, made orthonormal in C and turned to principal axes.  Steady
-states of the described inputs are exact; what is left out is fast.
+Ritz modes: the constant field, the static response to every input, the early response
+to every zone (Laplace variable s > 0, as in moment matching at two points) and the
+slowest eigenmodes, made orthonormal in C and turned to principal axes.  Steady states
+of the described inputs are exact; what is left out is fast.
 """
 
 from __future__ import annotations
@@ -17,60 +18,18 @@ from scipy.sparse import diags_array
 from scipy.sparse.linalg import LinearOperator, eigsh
 
 from platewatch.errors import PlateError
-from platewatch.thermal.conduction import Face, ThermalModel, input_vector, static_solver, steady
-from platewatch.thermal.grid import Ints, point_row
-from platewatch.thermal.stepping import GAMMA, Factored, factor, one_step
+from platewatch.thermal.conduction import Input, ThermalModel
+from platewatch.thermal.grid import point_row
+from platewatch.thermal.heatup import bend, heat_up, missed
+from platewatch.thermal.quadrature import Quadrature, build_quadrature
+from platewatch.thermal.rim import Ints
+from platewatch.thermal.stepping import lu
 from platewatch.types import Array
 
 MOST_EIGENMODES = 48
-START_ORDERS = 8
-HEATUP_DOUBLINGS = 7
-HEATUP_STEPS = 4  # of each size
-QUADRATURE = 48  # places where the reduced model sees the true loss
-
-
-@dataclass(frozen=True, eq=False)
-class LossTable:
-    """Convection of one face, W/m2, over plate temperature and ambient.
-
-    degC: even steps;  ambient_degC (k,);  flux (k, degC.size)
-    rows (p,): emissivity at the quadrature places
-    """
-
-    face: Face
-    degC: Array
-    ambient_degC: Array
-    flux: Array
-    emissivity: Array
-
-    def at(self, T: Array, u: Array) -> Array:
-        """W/m2 at the quadrature places' temperatures T (p,)."""
-        T_amb, T_sur = float(u[self.face.ambient]), float(u[self.face.surroundings])
-        step = self.ambient_degC[1] - self.ambient_degC[0]
-        place = min(max((T_amb - self.ambient_degC[0]) / step, 0.0), self.flux.shape[0] - 1.001)
-        lower = int(place)
-        part = place - lower
-        # The tables are over T - T_amb, where the correlations have their kink.
-        row = (1 - part) * self.flux[lower] + part * self.flux[lower + 1]
-        convection = np.interp(T - T_amb, self.degC, row)
-        square = (T + 273.15) ** 2
-        return convection + self.emissivity * (square * square - (T_sur + 273.15) ** 4)
-
-
-@dataclass(frozen=True, eq=False)
-class Quadrature:
-    """The nonlinear part of the losses on a few places.
-
-    rows (p, r): their temperature from a;  spread (r, p): W/m2 there to modal watts
-    slope (p,), constant (p,), by_input (p, m): the linear loss W/m2 there
-    """
-
-    rows: Array
-    spread: Array
-    slope: Array
-    constant: Array
-    by_input: Array
-    tables: tuple[LossTable, ...]
+LEAST_EIGENMODES = 16
+FEW_ZONES = 4  # up to here two transient fields a zone, else one
+DECAY = (40.0, 10.0)  # of the transient fields, in diffusivity / area of a zone
 
 
 @dataclass(frozen=True, eq=False)
@@ -96,7 +55,7 @@ class ReducedModel:
         return self.rates.size
 
     @property
-    def inputs(self) -> tuple[object, ...]:
+    def inputs(self) -> tuple[Input, ...]:
         return self.model.inputs
 
 
@@ -111,19 +70,22 @@ def reduce(model: ThermalModel, order: int | None = None, tolerance_K: float = 0
     modes = _slowest_modes(model, MOST_EIGENMODES if order is None else order)
     basis = _orthonormal(np.column_stack((fixed, modes)), model.capacity)
     least = min(basis.shape[1], _rank(fixed, model.capacity))
-    reference = _heat_up(model)
     if order is not None:
         if order < least:
             raise PlateError(f"a reduced order of {order} is too low; this plate needs {least}")
         candidates = [min(order, basis.shape[1])]
     else:
-        candidates = [*range(least + START_ORDERS, basis.shape[1], 4), basis.shape[1]]
+        candidates = [*range(least + LEAST_EIGENMODES, basis.shape[1], 4), basis.shape[1]]
+    full = heat_up(model)
     for r in candidates:
         V, rates = _principal(model, basis[:, :r])
-        error = _heat_up_error(model, V, rates, reference)
+        error = missed(model, V, rates, full)
         if error <= tolerance_K:
             break
-    return _finished(model, V, rates, error)
+    quadrature = build_quadrature(model, V)
+    if quadrature is not None or not model.stack.is_constant:
+        error += bend(model, V, rates, quadrature, full)
+    return _finished(model, V, rates, quadrature, error)
 
 
 def project(reduced: ReducedModel, T: Array) -> Array:
@@ -154,14 +116,9 @@ def flux_modes(reduced: ReducedModel, q: Array) -> Array:
 
 def remainder(reduced: ReducedModel, a: Array, u: Array) -> Array:
     """V'(linear loss - true loss) (r,): add it to da/dt.  On a coarse quadrature."""
-    quadrature = reduced.quadrature
-    if quadrature is None:
+    if reduced.quadrature is None:
         return np.zeros(reduced.order)
-    T = quadrature.rows @ a
-    excess = quadrature.slope * T + quadrature.constant + quadrature.by_input @ u
-    for table in quadrature.tables:
-        excess -= table.at(T, u)
-    return quadrature.spread @ excess
+    return reduced.quadrature.excess(a, u)
 
 
 def static_correction(reduced: ReducedModel, q: Array) -> tuple[Array, float]:
@@ -183,11 +140,20 @@ def static_correction(reduced: ReducedModel, q: Array) -> tuple[Array, float]:
 
 
 def _static_fields(model: ThermalModel) -> Array:
-    """(n, k): constant, then the settled response to every input and to the offset."""
+    """(n, k): constant, the settled response to every input and to the offset, then the
+    zones' response to heat that grows as exp(s t): what they do shortly after a step."""
     heat = np.column_stack((model.B, model.offset))
     heat = heat[:, np.abs(heat).max(axis=0) > 0]
-    answers = model.static(heat) if heat.size else np.empty((model.grid.n, 0))
-    return np.column_stack((np.ones(model.grid.n), answers))
+    answers = [model.static(heat)] if heat.size else []
+    zones = model.B[:, : len(model.plate.zones)]
+    if zones.size:
+        diffusivity = float(np.mean(model.stack.sheet_conductance(model.reference_degC)))
+        diffusivity *= float(model.grid.area.sum() / model.capacity.sum())
+        spread_m2 = model.grid.area.sum() / zones.shape[1]
+        for decay in DECAY if zones.shape[1] <= FEW_ZONES else DECAY[:1]:
+            growth = decay * diffusivity / spread_m2
+            answers.append(lu(model.K + diags_array(growth * model.capacity))(zones))
+    return np.column_stack((np.ones(model.grid.n), *answers))
 
 
 def _slowest_modes(model: ThermalModel, count: int) -> Array:
@@ -199,7 +165,7 @@ def _slowest_modes(model: ThermalModel, count: int) -> Array:
     else:
         # Any small shift makes K regular; the modes do not depend on it.
         shift = 1e-3 * float(model.K.diagonal().sum() / model.capacity.sum()) / n
-        solve = static_solver(model.K + diags_array(shift * model.capacity), model.capacity, True)
+        solve = lu(model.K + diags_array(shift * model.capacity))
     root = np.sqrt(model.capacity)
     inverse = LinearOperator(
         (n, n), matvec=lambda v: root * solve(root * np.ravel(v)), dtype=np.float64
@@ -240,115 +206,10 @@ def _principal(model: ThermalModel, basis: Array) -> tuple[Array, Array]:
     return np.ascontiguousarray(V), np.maximum(rates, 0.0)
 
 
-@dataclass(frozen=True, eq=False)
-class HeatUp:
-    """Heat q (n,) W from `initial` (n,) degC; steps dt (s,) and what they lead to (s, n)."""
-
-    q: Array
-    initial: Array
-    dt: Array
-    T: Array
-
-
-def _heat_up(model: ThermalModel) -> HeatUp:
-    """All zones on, towards a mean at the reference, in steps that double."""
-    ambient = float(np.mean([i.nominal for i in model.inputs if i.kind == "temperature"] or [22.0]))
-    u = input_vector(model, {zone.name: zone.watts for zone in model.plate.zones})
-    q = model.B @ u + model.offset
-    initial = np.full(model.grid.n, ambient)
-    total = max(float((q - model.K @ initial).sum()), 1e-9)
-    rise = max(model.reference_degC - ambient, 1.0)
-    end_s = float(model.capacity.sum()) * rise / total
-    if model.has_loss:
-        final = float(np.average(steady(model, u), weights=model.capacity)) - ambient
-        end_s = min(end_s, 3 * float(model.capacity.sum()) * max(final, 1e-3) / total)
-    shortest = end_s / (HEATUP_STEPS * (2**HEATUP_DOUBLINGS - 1))
-    T, fields, steps = initial, [], []
-    for doubling in range(HEATUP_DOUBLINGS):
-        factored = factor(model.capacity, model.K, shortest * 2**doubling)
-        for _ in range(HEATUP_STEPS):
-            T = one_step(model.capacity, lambda _t, v: q - model.K @ v, factored, 0.0, T)[0]
-            fields.append(T)
-            steps.append(factored.dt)
-    return HeatUp(q, initial, np.array(steps), np.array(fields))
-
-
-def _heat_up_error(model: ThermalModel, V: Array, rates: Array, full: HeatUp) -> float:
-    """Largest difference K to the reduced model stepped by the same scheme."""
-    a = V.T @ (model.capacity * full.initial)
-    drive = V.T @ full.q
-    states = []
-    ones = np.ones(rates.size)
-    for dt in full.dt:
-        factored = _factor_diagonal(rates, float(dt))
-        a = one_step(ones, lambda _t, v: drive - rates * v, factored, 0.0, a)[0]
-        states.append(a)
-    return float(np.abs(np.array(states) @ V.T - full.T).max())
-
-
-def _factor_diagonal(rates: Array, dt: float) -> Factored:
-    pivot = 1 / (GAMMA * dt) + rates
-    return Factored(dt, lambda q: q / pivot)
-
-
-def _finished(model: ThermalModel, V: Array, rates: Array, error_K: float) -> ReducedModel:
+def _finished(
+    model: ThermalModel, V: Array, rates: Array, quadrature: Quadrature | None, error_K: float
+) -> ReducedModel:
     digest = hashlib.sha256(V.tobytes())
     digest.update(rates.tobytes())
-    return ReducedModel(
-        V,
-        rates,
-        V.T @ model.B,
-        V.T @ model.offset,
-        model,
-        error_K,
-        digest.hexdigest(),
-        _quadrature(model, V),
-    )
-
-
-def _quadrature(model: ThermalModel, V: Array) -> Quadrature | None:
-    bent = [face for face in model.faces if not face.is_linear]
-    if not bent:
-        return None
-    block, area = _blocks(model)
-    rows = (block * model.grid.area) @ V / area[:, None]
-    reference = np.full(model.grid.n, model.reference_degC)
-    places = area.size
-    slope, constant = np.zeros(places), np.zeros(places)
-    by_input = np.zeros((places, len(model.inputs)))
-    tables = []
-    for face in bent:
-        by_T, by_amb, by_sur = (
-            np.broadcast_to(s, (model.grid.n,))[:1].repeat(places)
-            for s in face.slopes(reference, model.nominal)
-        )
-        flux = np.broadcast_to(face.flux(reference, model.nominal), (model.grid.n,))[:1]
-        slope += by_T
-        by_input[:, face.ambient] += by_amb
-        by_input[:, face.surroundings] += by_sur
-        constant += flux - by_T * model.reference_degC
-        constant -= by_amb * model.nominal[face.ambient]
-        constant -= by_sur * model.nominal[face.surroundings]
-        tables.append(_table(face, places))
-    return Quadrature(rows, rows.T * area, slope, constant, by_input, tuple(tables))
-
-
-def _blocks(model: ThermalModel) -> tuple[Array, Array]:
-    """Membership (p, n) of cells in about square blocks, and the blocks' areas (p,)."""
-    grid = model.grid
-    wide, high = grid.nx * grid.hx, grid.ny * grid.hy
-    across = max(1, round(float(np.sqrt(QUADRATURE * wide / high))))
-    upward = max(1, round(QUADRATURE / across))
-    column = np.minimum(grid.columns * across // grid.nx, across - 1)
-    row = np.minimum(grid.rows * upward // grid.ny, upward - 1)
-    labels, number = np.unique(row * across + column, return_inverse=True)
-    member = (number[None, :] == np.arange(labels.size)[:, None]).astype(float)
-    return member, member @ grid.area
-
-
-def _table(face: Face, places: int) -> LossTable:
-    difference = np.arange(-100.0, 900.0, 1.0)
-    ambients = np.arange(-40.0, 401.0, 20.0)
-    flux = np.array([face.convection(difference + each, float(each)) for each in ambients])
-    grey = float(face.emissivity[0]) * 5.670374419e-8
-    return LossTable(face, difference, ambients, flux, np.full(places, grey))
+    G, g0 = V.T @ model.B, V.T @ model.offset
+    return ReducedModel(V, rates, G, g0, model, error_K, digest.hexdigest(), quadrature)

@@ -34,8 +34,19 @@ class Factored:
 
 
 def factor(capacity: Array, K: csr_array, dt: float) -> Factored:
-    matrix = csc_array(K + diags_array(capacity / (GAMMA * dt)))
-    return Factored(dt, splu(matrix).solve)
+    return Factored(dt, lu(K + diags_array(capacity / (GAMMA * dt))))
+
+
+def lu(K: csr_array) -> Callable[[Array], Array]:
+    """Factor a matrix of symmetric pattern with a strong diagonal; solves (n,) or (n, k)."""
+    factors = splu(
+        csc_array(K),
+        permc_spec="MMD_AT_PLUS_A",
+        diag_pivot_thresh=0.01,
+        options={"SymmetricMode": True},
+    )
+    solve: Callable[[Array], Array] = factors.solve
+    return solve
 
 
 def one_step(
