@@ -13,12 +13,12 @@ from platewatch.adapters.settings_draft import Draft
 from platewatch.adapters.settings_lines import Where
 from platewatch.adapters.settings_schema import (
     Mistake,
-from platewatch.adapters.settings_schema_sensor import SensorEntry
     Temperature,
     TopicName,
     suggest,
     value_mistakes,
 )
+from platewatch.adapters.settings_schema_sensor import SensorEntry
 from platewatch.monitor.limits import LimitKind
 from platewatch.monitor.options import CAUSE_NAMES
 from platewatch.monitor.recipe import Do
