@@ -1,0 +1,349 @@
+"""The quiet filter of one plate: from thermocouples and heater powers to the field.
+
+"Quiet" because its process noise is never inflated to chase an event: what does
+not fit is left to be explained, not absorbed.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+import shapely
+
+from platewatch.monitor.kalman import Innovation, predict, update
+from platewatch.monitor.tolerance import tolerance_K
+from platewatch.monitor.transition import Blocks, Continuous, Noise, Steps
+from platewatch.thermal.conduction import InputKind, conduction_matrix
+from platewatch.thermal.grid import Grid
+from platewatch.thermal.plate import Plate, Sensor, geometry
+from platewatch.thermal.reduction import (
+    ReducedModel,
+    flux_modes,
+    point_rows,
+    project,
+    remainder,
+)
+from platewatch.types import Array, Gaussian
+
+BUMPS = 24  # nodes of the coarse mesh that carries the smooth unknown heat
+LEAST_LAG_S = 0.5  # a thermocouple without lag would only stiffen the arithmetic
+BIAS_WITHOUT_CLASS_K = 0.2
+POWER_MEMORY_S = 1800.0
+BUMP_MEMORY_S = 3600.0
+BIAS_MEMORY_S = 30 * 86400.0
+THETA_MEMORY_S = 30 * 86400.0
+# Half of the losses' relative uncertainty may differ from place to place.
+LOCAL_SHARE = 0.5
+
+
+@dataclass(frozen=True)
+class Quiet:
+    """What never changes while one description runs.
+
+    H (ns, n): each reading is its lagged junction plus its bias
+    noise_var (ns,) K2;  conduction, losses (r, r) modal W per K, their sum is diag(rates)
+    around_u: which inputs of the model are temperatures;  zone_u: which are powers
+    around_default (nu,) degC for a channel that nobody has heard of yet
+    cell_zone (n_cells,): the zone each cell counts to, by nearest film
+    """
+
+    plate: Plate
+    reduced: ReducedModel
+    blocks: Blocks
+    steps: Steps
+    deaf_steps: Steps
+    H: Array
+    noise_var: Array
+    conduction: Array
+    losses: Array
+    zone_u: tuple[int, ...]
+    around_u: tuple[int, ...]
+    around_names: tuple[str, ...]
+    around_default: Array
+    prior_field: Array
+    cell_zone: tuple[str, ...]
+
+    @property
+    def grid(self) -> Grid:
+        return self.reduced.model.grid
+
+    def inputs(self, zone_W: Array, around: Array) -> Array:
+        """The model's input vector (m,) from zone watts and surrounding temperatures."""
+        u = np.zeros(len(self.reduced.inputs))
+        u[list(self.zone_u)] = zone_W
+        u[list(self.around_u)] = around
+        return u
+
+    def steps_for(self, heard: bool) -> Steps:
+        """Exact steps; where duty is not on the bus, heater power is far less certain."""
+        return self.steps if heard else self.deaf_steps
+
+
+@dataclass(frozen=True)
+class FieldState:
+    """What is known of the plate at one instant.
+
+    heater_W (nz,): output of the heaters as called for, after their lag
+    called_W (nz,): last called watts;  around (nu,): last known temperatures
+    """
+
+    at_us: int
+    belief: Gaussian
+    heater_W: Array
+    called_W: Array
+    around: Array
+
+
+@dataclass(frozen=True)
+class Observed:
+    """The usable readings of one tick.
+
+    sensors (m,): indices;  degC (m,);  count (m,): readings averaged in each
+    share (m,): where in the tick they were taken, 0 its start, 1 its end
+    called_W (nz,): mean over the tick;  called_end_W (nz,): at its end
+    """
+
+    sensors: tuple[int, ...]
+    degC: Array
+    count: Array
+    share: Array
+    called_W: Array
+    called_end_W: Array
+    around: Array
+    duty_heard: bool = True
+
+
+def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
+    """Bilinear hat functions of a coarse mesh over the plate: (n_cells, nb) in m2.
+
+    They sum to each cell's area, so equal values are one uniform flux.
+    """
+    width, height = np.ptp(grid.x) + grid.hx, np.ptp(grid.y) + grid.hy
+    across = int(np.clip(round(np.sqrt(nodes * width / height)), 2, nodes // 2))
+    along = max(2, round(nodes / across))
+    u = (grid.x - grid.x.min() + grid.hx / 2) / width * (across - 1)
+    v = (grid.y - grid.y.min() + grid.hy / 2) / height * (along - 1)
+    hats_x = np.clip(1 - np.abs(u[:, None] - np.arange(across)), 0, None)
+    hats_y = np.clip(1 - np.abs(v[:, None] - np.arange(along)), 0, None)
+    hats = (hats_x[:, :, None] * hats_y[:, None, :]).reshape(grid.x.size, -1)
+    q = hats * grid.area[:, None]
+    return np.asarray(q[:, q.sum(0) > 1e-3 * grid.area.sum() / nodes])
+
+
+def bias_sd_K(sensor: Sensor, reference_degC: float) -> float:
+    """Half the class limit (IEC 60584-1, IEC 60751): the limit is taken as two sd."""
+    if sensor.tolerance_class is None:
+        return BIAS_WITHOUT_CLASS_K
+    limit = tolerance_K(sensor.element, sensor.tolerance_class, reference_degC)
+    return BIAS_WITHOUT_CLASS_K if limit is None else limit / 2
+
+
+def nearest_zone(plate: Plate, grid: Grid) -> tuple[str, ...]:
+    """The zone that each cell counts to: the one whose film is nearest."""
+    if not plate.zones:
+        return ("",) * grid.x.size
+    points = shapely.points(grid.x, grid.y)
+    distance = np.array(
+        [
+            shapely.distance(shapely.union_all([geometry(s) for s in zone.shapes]), points)
+            for zone in plate.zones
+        ]
+    )
+    return tuple(plate.zones[i].name for i in distance.argmin(axis=0))
+
+
+def _noise(plate: Plate, reference_degC: float, loss_W_m2: float, heard: bool) -> Noise:
+    watts = np.array([zone.watts for zone in plate.zones])
+    share = plate.uncertain.power if heard else 0.5
+    return Noise(
+        power_W=share * watts,
+        power_s=POWER_MEMORY_S if heard else POWER_MEMORY_S / 6,
+        bump_W_m2=LOCAL_SHARE * plate.uncertain.losses * loss_W_m2,
+        bump_s=BUMP_MEMORY_S,
+        bias_K=np.array([bias_sd_K(s, reference_degC) for s in plate.sensors]),
+        bias_s=BIAS_MEMORY_S,
+        theta=np.array([plate.uncertain.k, plate.uncertain.losses, plate.uncertain.cp]),
+        theta_s=THETA_MEMORY_S,
+    )
+
+
+def build_quiet(plate: Plate, reduced: ReducedModel, reference_degC: float) -> Quiet:
+    """Everything of the filter that follows from the description alone."""
+    model, grid = reduced.model, reduced.model.grid
+    zone_u = tuple(i for i, u in enumerate(reduced.inputs) if u.kind is InputKind.POWER)
+    around_u = tuple(i for i, u in enumerate(reduced.inputs) if u.kind is InputKind.TEMPERATURE)
+    around_default = np.array(
+        [u.value if u.value is not None else 22.0 for u in (reduced.inputs[i] for i in around_u)]
+    )
+    bumps = flux_modes(reduced, bump_fluxes(grid))
+    rows = point_rows(reduced, np.array([(s.x_m, s.y_m) for s in plate.sensors]))
+    ns = len(plate.sensors)
+    blocks = Blocks(reduced.rates.size, len(zone_u), bumps.shape[1], ns, 3)
+    ambient = float(around_default.mean()) if around_default.size else 22.0
+    loss_W_m2 = _typical_loss(reduced, reference_degC, ambient)
+
+    def system(heard: bool) -> Continuous:
+        return Continuous(
+            blocks=blocks,
+            rates=reduced.rates,
+            heat_zone=reduced.G[:, zone_u],
+            heat_bump=bumps,
+            heat_around=reduced.G[:, around_u],
+            constant=reduced.g0,
+            sensors=rows,
+            sensor_lag_s=np.array([max(s.lag_s, LEAST_LAG_S) for s in plate.sensors]),
+            heater_lag_s=np.array([max(z.lag_s, LEAST_LAG_S) for z in plate.zones]),
+            noise=_noise(plate, reference_degC, loss_W_m2, heard),
+        )
+
+    H = np.zeros((ns, blocks.size))
+    H[:, blocks.L] = np.eye(ns)
+    H[:, blocks.beta] = np.eye(ns)
+    spread = conduction_matrix(grid, model.stack.sheet_conductance(model.reference_degC))
+    conduction = reduced.V.T @ (spread @ reduced.V)
+    return Quiet(
+        plate=plate,
+        reduced=reduced,
+        blocks=blocks,
+        steps=Steps(system(True)),
+        deaf_steps=Steps(system(False)),
+        H=H,
+        noise_var=np.array([s.noise_K**2 + s.quantum_K**2 / 12 for s in plate.sensors]),
+        conduction=conduction,
+        losses=np.diag(reduced.rates) - conduction,
+        zone_u=zone_u,
+        around_u=around_u,
+        around_names=tuple(reduced.inputs[i].name for i in around_u),
+        around_default=around_default,
+        prior_field=_prior_field(plate, reduced, reference_degC, ambient),
+        cell_zone=nearest_zone(plate, grid),
+    )
+
+
+def _typical_loss(reduced: ReducedModel, reference_degC: float, ambient_degC: float) -> float:
+    """Mean loss in W/m2 of the plate at the reference temperature."""
+    model = reduced.model
+    heat = model.K @ np.full(model.capacity.size, max(reference_degC - ambient_degC, 10.0))
+    return float(heat.sum() / model.grid.area.sum())
+
+
+def _prior_field(
+    plate: Plate, reduced: ReducedModel, reference_degC: float, ambient_degC: float
+) -> Array:
+    """Modal covariance (r, r) of a plate about which nothing is known yet.
+
+    Anything between cold and hot all over, plus the pattern of any zone running
+    steadily at up to what holds the reference temperature.
+    """
+    ones = project(reduced, np.ones(reduced.model.capacity.size))
+    spread = max(reference_degC - ambient_degC, 20.0)
+    cov = np.outer(ones, ones) * spread**2
+    for column, zone in zip(reduced.G.T, plate.zones, strict=False):
+        quick = np.maximum(reduced.rates, 1 / 3600.0)
+        pattern = column / quick * zone.watts * 0.3
+        pattern = pattern - ones * (ones @ pattern) / (ones @ ones)
+        cov += np.outer(pattern, pattern)
+    return cov + np.eye(reduced.rates.size) * float(ones @ ones) * 1e-4
+
+
+def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
+    """Where the filter starts: a field as warm as its thermocouples, patterns unknown."""
+    k = quiet.blocks
+    level = float(np.median(seen.degC)) if seen.degC.size else float(quiet.around_default.mean())
+    mean = np.zeros(k.size)
+    mean[k.a] = project(quiet.reduced, np.full(quiet.reduced.model.capacity.size, level))
+    system = quiet.steps_for(seen.duty_heard).system
+    mean[k.L] = system.sensors @ mean[k.a]
+    lift = np.zeros((k.size, k.modes))
+    lift[k.a] = np.eye(k.modes)
+    lift[k.L] = system.sensors
+    cov = lift @ quiet.prior_field @ lift.T
+    noise = system.noise
+    spread = np.zeros(k.size)
+    spread[k.d] = noise.power_W
+    spread[k.b] = noise.bump_W_m2
+    spread[k.L] = 0.5
+    spread[k.beta] = noise.bias_K
+    spread[k.theta] = noise.theta
+    cov[np.diag_indices(k.size)] += spread**2
+    prior = Gaussian(mean, cov)
+    posterior, _ = _condition(quiet, prior, seen, prior.mean)
+    return FieldState(at_us, posterior, seen.called_end_W, seen.called_end_W, seen.around)
+
+
+def sensitivities(quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array) -> Array:
+    """Modal heat (r, 3) per unit relative error of conductivity, losses, heat capacity,
+    with the remainder of the losses as a fourth column."""
+    reduced, k = quiet.reduced, quiet.blocks
+    u = quiet.inputs(zone_W, around)
+    rest = remainder(reduced, a, u)
+    around_heat = reduced.G[:, list(quiet.around_u)] @ around
+    spread = quiet.conduction @ a
+    lost = quiet.losses @ a - around_heat - reduced.g0 - rest
+    zone_heat = reduced.G[:, list(quiet.zone_u)] @ zone_W
+    bump_heat = quiet.steps.system.heat_bump @ bump
+    warming = zone_heat + bump_heat - spread - lost
+    assert warming.size == k.modes
+    return np.column_stack((-spread, -lost, -warming, rest))
+
+
+def advance(
+    quiet: Quiet, state: FieldState, dt_us: int, seen: Observed
+) -> tuple[FieldState, Innovation]:
+    """One tick: predict over dt_us, then take in what was read during it."""
+    prior, heater_W = forecast_step(quiet, state, dt_us, seen.called_W, seen.around, seen)
+    posterior, innovation = _condition(quiet, prior, seen, state.belief.mean)
+    return (
+        FieldState(state.at_us + dt_us, posterior, heater_W, seen.called_end_W, seen.around),
+        innovation,
+    )
+
+
+def forecast_step(
+    quiet: Quiet,
+    state: FieldState,
+    dt_us: int,
+    called_W: Array,
+    around: Array,
+    seen: Observed | None = None,
+) -> tuple[Gaussian, Array]:
+    """The belief dt_us later when `called_W` is held: prior and heater outputs."""
+    k = quiet.blocks
+    step = quiet.steps_for(seen.duty_heard if seen else True).of(dt_us)
+    mean = state.belief.mean
+    delivered = state.heater_W + mean[k.d]
+    S = sensitivities(quiet, mean[k.a], delivered, mean[k.b], around)
+    F = step.F.copy()
+    F[:, k.theta] += step.modal @ S[:, :3]
+    push = (
+        step.heater @ state.heater_W
+        + step.called @ called_W
+        + step.around @ around
+        + step.constant
+        + step.modal @ S[:, 3]
+    )
+    heater_W = step.decay * state.heater_W + (1 - step.decay) * called_W
+    return predict(state.belief, F, step.Q, push), heater_W
+
+
+def _condition(
+    quiet: Quiet, prior: Gaussian, seen: Observed, before: Array
+) -> tuple[Gaussian, Innovation]:
+    """Take in the readings; one taken inside the tick is compared with the mean
+    expected at its own instant, between the start and the end of the tick."""
+    rows = list(seen.sensors)
+    H = quiet.H[rows]
+    share = seen.share
+    expected = share * (H @ prior.mean) + (1 - share) * (H @ before)
+    variance = quiet.noise_var[rows] / seen.count
+    return update(prior, seen.degC, H, variance, seen.sensors, expected)
+
+
+def restarted(quiet: Quiet, state: FieldState, at_us: int) -> FieldState:
+    """The state carried over a time without readings, its uncertainty grown by it."""
+    gap_us = at_us - state.at_us
+    if gap_us <= 0:
+        return replace(state, at_us=at_us)
+    belief, heater_W = forecast_step(quiet, state, gap_us, state.called_W, state.around)
+    return FieldState(at_us, belief, heater_W, state.called_W, state.around)

@@ -1,0 +1,188 @@
+"""From the readings of a tick to what the estimator takes in, and what is remembered."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from platewatch.monitor.estimator import Observed, Quiet
+from platewatch.monitor.loops import delivered_share
+from platewatch.monitor.signals import to_degC
+from platewatch.types import Array, Reading, Tick
+from platewatch.units import TemperatureUnit
+from platewatch.units import to_degC as unit_to_degC
+
+SLOPE_SPAN_US = 60_000_000  # set-points of the last minute give their slope
+SLOPE_LEAST_US = 20_000_000
+DUTY_SLACK = 1.02  # a duty up to 2 % beyond full scale is rounding, not a mistake
+
+
+@dataclass(frozen=True)
+class Heard:
+    """The last that each channel said.
+
+    degC (ns,), sensor_us (ns,): last reading and its stamp, nan and 0 before the first
+    interval_us (ns,): running mean of the time between readings
+    duty (nz,): 0..1, nan before the first;  set_points: recent (at_us, degC) by zone
+    around (nu,) degC;  raw_trouble: why a sensor's last value was no temperature
+    """
+
+    degC: Array
+    sensor_us: tuple[int, ...]
+    interval_us: tuple[int, ...]
+    duty: Array
+    set_points: tuple[tuple[tuple[int, float], ...], ...]
+    around: Array
+    raw_trouble: tuple[str, ...]
+
+    @property
+    def set_point(self) -> Array:
+        """(nz,) degC, nan where none is known."""
+        return np.array([s[-1][1] if s else np.nan for s in self.set_points])
+
+    @property
+    def set_point_slope(self) -> Array:
+        """(nz,) K/s over the last minute."""
+        return np.array([_slope(s) for s in self.set_points])
+
+
+def _slope(points: tuple[tuple[int, float], ...]) -> float:
+    if not points or points[-1][0] - points[0][0] < SLOPE_LEAST_US:
+        return 0.0
+    return (points[-1][1] - points[0][1]) / ((points[-1][0] - points[0][0]) / 1e6)
+
+
+def nothing_heard(quiet: Quiet) -> Heard:
+    """Before the first reading."""
+    ns, nz = len(quiet.plate.sensors), len(quiet.plate.zones)
+    return Heard(
+        degC=np.full(ns, np.nan),
+        sensor_us=(0,) * ns,
+        interval_us=(0,) * ns,
+        duty=np.full(nz, np.nan),
+        set_points=((),) * nz,
+        around=quiet.around_default.copy(),
+        raw_trouble=("",) * ns,
+    )
+
+
+def take_in(
+    quiet: Quiet, heard: Heard, tick: Tick, unit: TemperatureUnit
+) -> tuple[Heard, Observed]:
+    """Sort a tick's usable readings by channel; the refused ones are only remembered."""
+    by_channel: dict[str, list[Reading]] = {}
+    for reading in tick.readings:
+        if reading.usable:
+            by_channel.setdefault(reading.channel, []).append(reading)
+    around = heard.around.copy()
+    surround = {n: r[-1].value for n, r in by_channel.items() if n.startswith("surround/")}
+    for i, name in enumerate(quiet.around_names):
+        if name in surround:
+            around[i] = unit_to_degC(surround[name], unit)
+    heard = replace(heard, around=around)
+    heard, sensors = _sensors(quiet, heard, tick, by_channel, unit)
+    called, heard = _duties(quiet, heard, tick, by_channel)
+    heard = replace(heard, set_points=_set_points(quiet, heard, by_channel, unit))
+    share = np.array([_share_of_watts(quiet, i, d) for i, d in enumerate(heard.duty)])
+    return heard, Observed(
+        sensors=tuple(s[0] for s in sensors),
+        degC=np.array([s[1] for s in sensors]),
+        count=np.array([s[2] for s in sensors], dtype=np.float64),
+        share=np.array([s[3] for s in sensors]),
+        called_W=called,
+        called_end_W=share,
+        around=around,
+        duty_heard=not bool(np.isnan(heard.duty).any()),
+    )
+
+
+def _share_of_watts(quiet: Quiet, zone: int, duty: float) -> float:
+    """Watts called for at a duty of 0..1; none where the duty was never heard."""
+    z = quiet.plate.zones[zone]
+    return 0.0 if np.isnan(duty) else float(z.watts * delivered_share(z, duty))
+
+
+def _cold_junctions(
+    quiet: Quiet, heard: Heard, readings: dict[str, list[Reading]], unit: TemperatureUnit
+) -> dict[str, float]:
+    """Temperatures of the terminal blocks that are measured, by channel."""
+    known = dict(zip(quiet.around_names, heard.around, strict=True))
+    for name, rows in readings.items():
+        if name.startswith("surround/"):
+            known[name] = unit_to_degC(rows[-1].value, unit)
+    return known
+
+
+def _sensors(
+    quiet: Quiet,
+    heard: Heard,
+    tick: Tick,
+    readings: dict[str, list[Reading]],
+    unit: TemperatureUnit,
+) -> tuple[Heard, list[tuple[int, float, int, float]]]:
+    """(sensor, mean degC, how many, share of the tick) for each sensor that spoke."""
+    junctions = _cold_junctions(quiet, heard, readings, unit)
+    degC, seen = heard.degC.copy(), list(heard.sensor_us)
+    interval, trouble = list(heard.interval_us), list(heard.raw_trouble)
+    found = []
+    for i, sensor in enumerate(quiet.plate.sensors):
+        values, stamps = [], []
+        for r in readings.get(f"sensor/{sensor.name}", ()):
+            junction = sensor.cold_junction
+            signal = to_degC(
+                sensor, r.value, junctions.get(junction) if isinstance(junction, str) else None
+            )
+            trouble[i] = signal.reason
+            if signal.degC is not None:
+                values.append(signal.degC)
+                stamps.append(r.at_us)
+        if not values:
+            continue
+        if seen[i]:
+            spacing = (stamps[-1] - seen[i]) // len(stamps)
+            interval[i] = spacing if not interval[i] else (7 * interval[i] + spacing) // 8
+        degC[i], seen[i] = values[-1], stamps[-1]
+        middle = sum(s - tick.at_us for s in stamps) / len(stamps)
+        share = float(np.clip(1 + middle / tick.dt_us, 0.0, 1.0))
+        found.append((i, float(np.mean(values)), len(values), share))
+    heard = replace(
+        heard,
+        degC=degC,
+        sensor_us=tuple(seen),
+        interval_us=tuple(interval),
+        raw_trouble=tuple(trouble),
+    )
+    return heard, found
+
+
+def _duties(
+    quiet: Quiet, heard: Heard, tick: Tick, readings: dict[str, list[Reading]]
+) -> tuple[Array, Heard]:
+    """Mean watts called for over the tick; a duty holds from its stamp to the next."""
+    duty = heard.duty.copy()
+    called = np.zeros(duty.size)
+    for i, zone in enumerate(quiet.plate.zones):
+        since, spent = tick.at_us - tick.dt_us, 0.0
+        for r in readings.get(f"zone/{zone.name}/duty", ()):
+            value = r.value / zone.duty_full
+            if not 0.0 <= value <= DUTY_SLACK:
+                continue
+            spent += _share_of_watts(quiet, i, duty[i]) * (r.at_us - since)
+            since, duty[i] = r.at_us, min(value, 1.0)
+        spent += _share_of_watts(quiet, i, duty[i]) * (tick.at_us - since)
+        called[i] = spent / tick.dt_us
+    return called, replace(heard, duty=duty)
+
+
+def _set_points(
+    quiet: Quiet, heard: Heard, readings: dict[str, list[Reading]], unit: TemperatureUnit
+) -> tuple[tuple[tuple[int, float], ...], ...]:
+    kept = []
+    for zone, old in zip(quiet.plate.zones, heard.set_points, strict=True):
+        new = readings.get(f"zone/{zone.name}/setpoint", ())
+        points = old + tuple((r.at_us, unit_to_degC(r.value, unit)) for r in new)
+        if points:
+            points = tuple(p for p in points if points[-1][0] - p[0] <= SLOPE_SPAN_US)
+        kept.append(points)
+    return tuple(kept)

@@ -1,0 +1,127 @@
+"""Control loops as the forecast needs them: what the controllers will ask for next."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from platewatch.monitor.recipe import Do, Recipe
+from platewatch.thermal.plate import DutyLaw, Loop, LoopForm, Plate, Zone
+from platewatch.types import Array
+
+RAMP_MATCH = 0.15  # a set-point slope within 15 % of a recipe's rate is that ramp
+
+
+def delivered_share(zone: Zone, duty: Array | float) -> Array:
+    """Share of the zone's watts at a duty of 0..1, by its duty law.
+
+    phase-angle: resistive load, conduction over the share `duty` of each half
+    cycle: d - sin(2 pi d) / (2 pi) (closed form of the mean of sin squared).
+    """
+    d = np.asarray(duty, dtype=np.float64)
+    match zone.duty_law:
+        case DutyLaw.LINEAR | DutyLaw.BURST:
+            return d
+        case DutyLaw.PHASE_ANGLE:
+            return np.asarray(d - np.sin(2 * np.pi * d) / (2 * np.pi))
+        case DutyLaw.VOLTAGE_SQUARED:
+            return np.asarray(d**2)
+        case DutyLaw.POWER:
+            return np.asarray(d**zone.duty_exponent)
+
+
+@dataclass(frozen=True)
+class Loops:
+    """The plate's loops as arrays over its zones; `closed` marks the zones that have one.
+
+    gain duty/K, integral_s (inf: none), derivative_s, low, high: (nz,)
+    sensor (nz,): index of the controlling thermocouple, 0 where there is none
+    """
+
+    zones: tuple[Zone, ...]
+    closed: Array
+    gain: Array
+    integral_s: Array
+    derivative_s: Array
+    low: Array
+    high: Array
+    sensor: Array
+
+    def watts(self, duty: Array) -> Array:
+        """(nz, N) duty to (nz, N) watts called for."""
+        return np.array(
+            [z.watts * delivered_share(z, d) for z, d in zip(self.zones, duty, strict=True)]
+        )
+
+    def duty_for(self, error_K: Array, integral: Array, slope_K_s: Array) -> Array:
+        """Output (nz, N) before limits: gain * error + integral - derivative part."""
+        column = self.gain[:, None]
+        return np.asarray(
+            column * error_K + integral - column * self.derivative_s[:, None] * slope_K_s
+        )
+
+    def next_integral(self, error_K: Array, integral: Array, wanted: Array, dt_s: float) -> Array:
+        """Integrate, except where that would push further past a limit (anti-windup)."""
+        stuck = ((wanted >= self.high[:, None]) & (error_K > 0)) | (
+            (wanted <= self.low[:, None]) & (error_K < 0)
+        )
+        rate = self.gain[:, None] * error_K / self.integral_s[:, None]
+        return np.asarray(integral + np.where(stuck, 0.0, rate) * dt_s)
+
+
+def _ideal(loop: Loop) -> tuple[float, float, float]:
+    """Gain, integral and derivative time in the ideal form (series converted)."""
+    ti = loop.integral_s or np.inf
+    if loop.form is LoopForm.IDEAL or loop.derivative_s == 0 or not np.isfinite(ti):
+        return loop.gain_per_K, ti, loop.derivative_s
+    both = 1 + loop.derivative_s / ti
+    return loop.gain_per_K * both, ti * both, loop.derivative_s / both
+
+
+def build_loops(plate: Plate) -> Loops:
+    """The loops of a plate, one column a zone."""
+    names = [s.name for s in plate.sensors]
+    rows = []
+    for zone in plate.zones:
+        loop = zone.loop
+        if loop is None:
+            rows.append((0.0, 0.0, np.inf, 0.0, 0.0, 1.0, 0.0))
+        else:
+            gain, ti, td = _ideal(loop)
+            rows.append((1.0, gain, ti, td, loop.low, loop.high, float(names.index(loop.sensor))))
+    table = np.array(rows).reshape(len(plate.zones), 7).T
+    return Loops(plate.zones, *table)
+
+
+def set_points_ahead(
+    now_degC: Array, slope_K_s: Array, recipes: tuple[Recipe, ...], times_s: Array
+) -> Array:
+    """Set-points (nz, times): a ramp that a recipe knows goes on to its end, else held.
+
+    now_degC (nz,): nan where no set-point is known
+    """
+    ahead = np.repeat(now_degC[:, None], times_s.size, axis=1)
+    for zone, (now, slope) in enumerate(zip(now_degC, slope_K_s, strict=True)):
+        goal = _ramp_goal(float(now), float(slope), recipes)
+        if goal is not None:
+            moved = now + slope * times_s
+            ahead[zone] = np.minimum(moved, goal) if slope > 0 else np.maximum(moved, goal)
+    return ahead
+
+
+def _ramp_goal(now: float, slope: float, recipes: tuple[Recipe, ...]) -> float | None:
+    """Where the ramp that is running now will end, if a recipe knows it."""
+    if not np.isfinite(now) or abs(slope) < 1e-6:
+        return None
+    goals = [
+        step.to_degC
+        for recipe in recipes
+        for step in recipe.steps
+        if step.do is Do.RAMP
+        and step.to_degC is not None
+        and step.rate_K_per_s
+        and abs(abs(slope) - step.rate_K_per_s) <= RAMP_MATCH * step.rate_K_per_s
+        and (step.to_degC - now) * slope > 0
+    ]
+    return min(goals, key=lambda goal: abs(goal - now)) if goals else None
