@@ -24,7 +24,7 @@ MOST_W_PER_M2 = 1e6
 
 def mistakes(read: Draft) -> Iterator[Mistake]:
     """Everything that lies where it cannot lie."""
-    yield from _crossed(read)
+    yield from _single_shapes(read)
     plate = read.one(tables.PlateEntry)
     if plate is None or not plate.outline.complete:
         return
@@ -73,8 +73,12 @@ def _valid(entries: list[tables.ShapeEntry]) -> tuple[Area, ...]:
     return tuple(polygon for polygon in found if polygon.is_valid)
 
 
-def _crossed(read: Draft) -> Iterator[Mistake]:
+def _single_shapes(read: Draft) -> Iterator[Mistake]:
     for where, entry in _shapes(read):
+        if where[-1] != "outline" and entry.shape in ("rectangle", "circle"):
+            for key in ("x_mm", "y_mm"):
+                if getattr(entry, key) is None:
+                    yield Mistake((*where, key), "is missing", f"add {key} = ... in millimetres")
         if entry.complete and not geometry(shape(entry)).is_valid:
             yield Mistake(
                 where,
