@@ -15,11 +15,9 @@ from typing import Self
 
 from sqlalchemy import Connection, Engine
 
-from ..errors import StorageError
-from ..types import BatchEvent, Outcome, Reading
-from .storage_audit import Verification, verify_record
-from .storage_chain import ChainHead, append, chain_head
-from .storage_file import (
+from platewatch.adapters.storage_audit import Verification, verify_record
+from platewatch.adapters.storage_chain import ChainHead, append, chain_head
+from platewatch.adapters.storage_file import (
     DatabaseBusyError,
     DiskFullError,
     database_path,
@@ -27,10 +25,18 @@ from .storage_file import (
     open_engine,
     storage_errors,
 )
-from .storage_read import AlarmRow, AppliedAction, Note, Record, Run
-from .storage_tables import CHAINS, clock_note, description, person_action, run
-from .storage_tidy import Tidied, tidy_record
-from .storage_write import channel_ids, write_events, write_note, write_outcomes, write_readings
+from platewatch.adapters.storage_read import AlarmRow, AppliedAction, Note, Record, Run
+from platewatch.adapters.storage_tables import CHAINS, clock_note, description, person_action, run
+from platewatch.adapters.storage_tidy import Tidied, tidy_record
+from platewatch.adapters.storage_write import (
+    channel_ids,
+    write_events,
+    write_note,
+    write_outcomes,
+    write_readings,
+)
+from platewatch.errors import StorageError
+from platewatch.types import BatchEvent, Outcome, Reading
 
 __all__ = [
     "AlarmRow",
@@ -72,7 +78,7 @@ class Store(Record):
         super().__init__(engine, path)
         self._writer = engine.execution_options(write=True)
         self._ids: dict[tuple[str, str, str], int] = {}
-        self._described: dict[str, str] = {}
+        self._runs: dict[str, tuple[int, str]] = {}  # plate: run_no, description
 
     @classmethod
     def open(cls, url: str, *, create: bool = True, read_only: bool = False) -> Self:
@@ -125,8 +131,8 @@ class Store(Record):
                     {"sha256": description_sha256, "content": content},
                 )
             key = connection.execute(run.insert(), row).inserted_primary_key
-        self._described[plate] = description_sha256
         assert key is not None
+        self._runs[plate] = (int(key[0]), description_sha256)
         return int(key[0])
 
     def write(
@@ -149,7 +155,11 @@ class Store(Record):
             ids = {name: fresh.get(name) or self._id(plate, name, units) for name in names}
             stored = write_readings(connection, ids, readings)
             write_events(connection, plate, events)
-            write_outcomes(connection, plate, outcomes, self._described.get(plate, ""))
+            run_no, described = self._runs.get(plate, (0, ""))
+            write_outcomes(connection, plate, outcomes, described)
+            if outcomes:
+                last = run.update().where(run.c.run_no == run_no)
+                connection.execute(last.values(last_tick_us=outcomes[-1].at_us))
         # Only now: numbers given out in a transaction that failed are void.
         self._ids |= {(plate, name, units.get(name, "")): no for name, no in fresh.items()}
         return Written(stored, len(readings) - stored)

@@ -9,8 +9,14 @@ from dataclasses import dataclass
 
 from sqlalchemy import Connection, Table, select
 
-from .storage_chain import GENESIS, ChainHead, chain_head, check_anchor, check_chain
-from .storage_tables import CHAINS, alarm_event, description, log_note
+from platewatch.adapters.storage_chain import (
+    GENESIS,
+    ChainHead,
+    chain_head,
+    check_anchor,
+    check_chain,
+)
+from platewatch.adapters.storage_tables import CHAINS, alarm_event, description, log_note
 
 CAUTION = (
     "A chain whose tail was cut, or that was rewritten as a whole, cannot be told from an "
@@ -60,13 +66,19 @@ def chain_start(connection: Connection, table: Table) -> ChainHead:
     start = ChainHead(table.name, 0, GENESIS)
     if table is not alarm_event:
         return start
-    query = select(log_note.c.text).where(log_note.c.person == "").order_by(log_note.c.seq)
-    for text in connection.execute(query).scalars():
-        if text.startswith(REMOVED):
-            found = json.loads(text.removeprefix(REMOVED))
-            if found["table"] == table.name:
-                start = ChainHead(table.name, int(found["to_seq"]), str(found["hash"]))
-    return start
+    written = log_note.c.text.startswith(REMOVED, autoescape=True) & (log_note.c.person == "")
+    query = select(log_note.c.text).where(written).order_by(log_note.c.seq)
+    heads = [_removed(text) for text in connection.execute(query).scalars()]
+    return next((h for h in reversed(heads) if h and h.table == table.name), start)
+
+
+def _removed(text: object) -> ChainHead | None:
+    """The head in a removal note; None if the line was tampered with, which its chain shows."""
+    try:
+        found = json.loads(str(text).removeprefix(REMOVED))
+        return ChainHead(str(found["table"]), int(found["to_seq"]), str(found["hash"]))
+    except (ValueError, KeyError, TypeError):
+        return None
 
 
 def _file_findings(connection: Connection) -> Iterator[str]:

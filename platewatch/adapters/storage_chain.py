@@ -31,7 +31,10 @@ def row_hash(table: str, row: Mapping[str, object]) -> str:
     table is part of it, so that a row cannot be moved to another chain.
     """
     content = {name: value for name, value in row.items() if name != "hash"}
-    text = json.dumps({"table": table, **content}, sort_keys=True, separators=(",", ":"))
+    # default: a tampered cell may hold bytes, which must give a wrong hash and no traceback.
+    text = json.dumps(
+        {"table": table, **content}, sort_keys=True, separators=(",", ":"), default=repr
+    )
     return hashlib.sha256(text.encode("ascii")).hexdigest()
 
 

@@ -13,8 +13,13 @@ from urllib.parse import quote
 from sqlalchemy import Connection, Engine, QueuePool, StaticPool, create_engine, event, make_url
 from sqlalchemy.exc import ArgumentError, DBAPIError
 
-from ..errors import StorageError
-from .storage_tables import APPLICATION_ID, SCHEMA_NUMBER, metadata, schema_number
+from platewatch.adapters.storage_tables import (
+    APPLICATION_ID,
+    SCHEMA_NUMBER,
+    metadata,
+    schema_number,
+)
+from platewatch.errors import StorageError
 
 BUSY_TIMEOUT_S = 5.0
 _WAL_LIMIT_BYTES = 64 * 2**20

@@ -10,23 +10,9 @@ from typing import Any
 
 from sqlalchemy import ColumnElement, Connection, Engine, Row, Select, Table, func, select
 
-from ..errors import StorageError
-from ..types import (
-    Action,
-    AlarmEvent,
-    AlarmState,
-    BatchEvent,
-    FieldShot,
-    Flag,
-    Gap,
-    LimitRow,
-    PeakRow,
-    Reading,
-    ZonePowerRow,
-)
-from .storage_file import storage_errors
-from .storage_state import unpack_state
-from .storage_tables import (
+from platewatch.adapters.storage_file import storage_errors
+from platewatch.adapters.storage_state import unpack_state
+from platewatch.adapters.storage_tables import (
     action_applied,
     alarm_event,
     alarm_limit_probability,
@@ -43,6 +29,20 @@ from .storage_tables import (
     run,
     zone_power,
 )
+from platewatch.errors import StorageError
+from platewatch.types import (
+    Action,
+    AlarmEvent,
+    AlarmState,
+    BatchEvent,
+    FieldShot,
+    Flag,
+    Gap,
+    LimitRow,
+    PeakRow,
+    Reading,
+    ZonePowerRow,
+)
 
 _FLAGS = {number: Flag(number) for number in range(32)}
 _PEAK_OPTIONAL = {"limit_degC", "p_over", "to_limit_s"}
@@ -50,13 +50,17 @@ _PEAK_OPTIONAL = {"limit_degC", "p_over", "to_limit_s"}
 
 @dataclass(frozen=True, slots=True)
 class Run:
-    """One start of the daemon or of a replay for one plate."""
+    """One start of the daemon or of a replay for one plate.
+
+    last_tick_us: the last tick that was stored; None before the first
+    """
 
     run_no: int
     plate: str
     started_us: int
     version: str
     description_sha256: str
+    last_tick_us: int | None
 
 
 @dataclass(frozen=True, slots=True)

@@ -6,8 +6,8 @@ import struct
 
 import numpy as np
 
-from ..errors import StorageError
-from ..types import FieldShot
+from platewatch.errors import StorageError
+from platewatch.types import FieldShot
 
 _MAGIC = b"PWFS"
 _VERSION = 1

@@ -209,6 +209,8 @@ run = Table(
     _text("version"),
     _text("description_sha256"),
     _text("plate"),
+    # How far the ticks had come; in a silence only the record knows it.
+    Column("last_tick_us", BigInteger),
     sqlite_autoincrement=True,
 )
 

@@ -8,10 +8,9 @@ from dataclasses import dataclass
 
 from sqlalchemy import ColumnElement, Connection, Engine, Table, delete, func, select
 
-from ..types import AlarmState
-from .storage_audit import removal_note
-from .storage_chain import ChainHead
-from .storage_tables import (
+from platewatch.adapters.storage_audit import removal_note
+from platewatch.adapters.storage_chain import ChainHead
+from platewatch.adapters.storage_tables import (
     alarm_event,
     alarm_limit_probability,
     cause_probability,
@@ -20,7 +19,8 @@ from .storage_tables import (
     reading,
     zone_power,
 )
-from .storage_write import write_note
+from platewatch.adapters.storage_write import write_note
+from platewatch.types import AlarmState
 
 _DAY_US = 86_400_000_000
 _ROWS = 10_000

@@ -7,10 +7,9 @@ from collections.abc import Iterable, Mapping, Sequence
 
 from sqlalchemy import Connection, select
 
-from ..types import AlarmEvent, BatchEvent, FieldShot, Outcome, PeakRow, Reading
-from .storage_chain import append
-from .storage_state import pack_state
-from .storage_tables import (
+from platewatch.adapters.storage_chain import append
+from platewatch.adapters.storage_state import pack_state
+from platewatch.adapters.storage_tables import (
     action_applied,
     alarm_event,
     alarm_limit_probability,
@@ -24,6 +23,7 @@ from .storage_tables import (
     reading,
     zone_power,
 )
+from platewatch.types import AlarmEvent, BatchEvent, FieldShot, Outcome, PeakRow, Reading
 
 Ids = Mapping[str, int]
 

@@ -9,7 +9,7 @@ from itertools import chain, islice
 from pathlib import Path
 from typing import Any
 
-from ..errors import SettingsError, StorageError
+from platewatch.errors import SettingsError, StorageError
 
 Rows = Iterable[Sequence[object]]
 
