@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from shapely.geometry.base import BaseGeometry
 
 from platewatch.thermal.grid import Grid, footprint
 from platewatch.thermal.losses import (
@@ -14,7 +15,7 @@ from platewatch.thermal.losses import (
     radiation_flux,
     radiation_slope,
 )
-from platewatch.thermal.plate import Correlation, Material, Plate, Surface, geometry
+from platewatch.thermal.plate import Correlation, Material, Plate, Surface, Table, geometry
 from platewatch.types import Array
 
 LEAST_SLOPE = 0.1  # W/m2K
@@ -103,6 +104,11 @@ class Stack:
         total: Array = np.sum([m.rho * m.cp.at(T) * depth for m, depth in self.parts], axis=0)
         return total
 
+    def heat_content(self, T: Array) -> Array:
+        """J/m2 from 0 degC up to the temperatures T (n,) degC."""
+        total: Array = np.sum([m.rho * _integral(m.cp, T) * d for m, d in self.parts], axis=0)
+        return total
+
     @property
     def is_constant(self) -> bool:
         return all(m.k.is_constant and m.cp.is_constant for m, _ in self.parts)
@@ -113,7 +119,7 @@ def build_stack(plate: Plate, grid: Grid) -> Stack:
     base = np.ones(grid.n)
     parts: list[tuple[Material, Array]] = []
     for number, inset in enumerate(plate.insets):
-        region = geometry(inset.shape)
+        region: BaseGeometry = geometry(inset.shape)
         for later in plate.insets[number + 1 :]:
             region = region.difference(geometry(later.shape))
         share = footprint(grid, region) / grid.area
@@ -125,3 +131,14 @@ def build_stack(plate: Plate, grid: Grid) -> Stack:
     parts += [(layer.material, np.full(grid.n, layer.thickness_m)) for layer in plate.layers]
     thickness: Array = np.sum([depth for _, depth in parts], axis=0)
     return Stack(tuple(parts), thickness)
+
+
+def _integral(table: Table, T: Array) -> Array:
+    """Integral of a table from 0 degC to the temperatures T, exact between its points."""
+    knots = np.union1d(np.asarray(table.degC), (-1e4, 0.0, 1e4))
+    value = table.at(knots)
+    area = np.concatenate(((0.0,), np.cumsum(np.diff(knots) * (value[1:] + value[:-1]) / 2)))
+    area -= area[np.searchsorted(knots, 0.0)]
+    below = np.clip(np.searchsorted(knots, T, side="right") - 1, 0, knots.size - 2)
+    part: Array = area[below] + (T - knots[below]) * (value[below] + table.at(T)) / 2
+    return part

@@ -11,6 +11,7 @@ from scipy.sparse import coo_array, csr_array
 from platewatch.thermal.conduction import InputKind, ThermalModel, loss_watts
 from platewatch.thermal.grid import footprint
 from platewatch.thermal.plate import Contact
+from platewatch.thermal.rim import Ints
 from platewatch.types import Array
 
 SLOPE_STEP_K = 1e-3
@@ -48,13 +49,21 @@ class FullEquations:
         cells = self.model.grid.area * self.model.stack.heat_capacity(T[: self.model.grid.n])
         return np.concatenate((cells, [load.heat_capacity for load in self.loads]))
 
+    def heat_content(self, T: Array) -> float:
+        """J above 0 degC in plate and loads."""
+        n = self.model.grid.n
+        plate = self.model.grid.area @ self.model.stack.heat_content(T[:n])
+        return float(
+            plate + sum(c.heat_capacity * t for c, t in zip(self.loads, T[n:], strict=True))
+        )
+
     def rate(self, T: Array, u: Array) -> Array:
         """Net heat (n + loads,) W into every node."""
         cells, above = T[: self.model.grid.n], T[self.model.grid.n :]
         q = self.power(u) - loss_watts(self.model, cells, u) - self.side_loss(cells, u)
         links = self.model.grid.links
         flow = self._conductance(cells) * (cells[links.i] - cells[links.j])
-        q -= np.bincount(links.i, flow, q.size) - np.bincount(links.j, flow, q.size)
+        q += _gathered(links.j, flow, q.size) - _gathered(links.i, flow, q.size)
         q += self.contacts.T @ above - self.contacts.sum(axis=0) * cells
         return np.concatenate((q, self.contacts @ cells - self.contacts.sum(axis=1) * above))
 
@@ -73,8 +82,7 @@ class FullEquations:
         if not sides.cell.size:
             return np.zeros(cells.size)
         flow = self._side_conductance(cells, u) * (cells[sides.cell] - u[sides.into])
-        lost: Array = np.bincount(sides.cell, flow, cells.size)
-        return lost
+        return _gathered(sides.cell, flow, cells.size)
 
     def jacobian(self, T: Array, u: Array) -> csr_array:
         """-d rate / dT, sparse (n + loads, n + loads) W/K."""
@@ -85,7 +93,7 @@ class FullEquations:
         for face in model.faces:
             diagonal += model.grid.area * face.slopes(cells, u)[0]
         if sides.cell.size:
-            diagonal += np.bincount(sides.cell, self._side_slopes(cells, u), n)
+            diagonal += _gathered(sides.cell, self._side_slopes(cells, u), n)
         diagonal += self.contacts.sum(axis=0)
         rows = [np.arange(n), links.i, links.i, links.j, links.j]
         columns = [np.arange(n), links.i, links.j, links.i, links.j]
@@ -125,14 +133,12 @@ class FullEquations:
     def _side_conductance(self, cells: Array, u: Array) -> Array:
         """W/K of rim and clamps, k midway between the cell and what it is held at."""
         sides = self.model.sides
-        halfway = cells.copy()
-        if not self.model.stack.is_constant:
-            held = sides.film == 0
-            halfway_T = cells[sides.cell] + 0.5 * held * (u[sides.into] - cells[sides.cell])
-            return sides.conductance(self._conductivity_at(sides.cell, halfway_T))
-        return sides.conductance(self.model.stack.conductivity(halfway)[sides.cell])
+        here = cells[sides.cell]
+        held = sides.film == 0
+        halfway = here + 0.5 * held * (u[sides.into] - here)
+        return sides.conductance(self._conductivity_at(sides.cell, halfway))
 
-    def _conductivity_at(self, cell: np.ndarray, T: Array) -> Array:  # type: ignore[type-arg]
+    def _conductivity_at(self, cell: Ints, T: Array) -> Array:
         parts = self.model.stack.parts
         sheet: Array = np.sum([m.k.at(T) * depth[cell] for m, depth in parts], axis=0)
         return sheet / self.model.stack.thickness_m[cell]
@@ -143,4 +149,10 @@ class FullEquations:
         def flow(T: Array) -> Array:
             return self._side_conductance(T, u) * (T[sides.cell] - u[sides.into])
 
-        return (flow(cells + SLOPE_STEP_K) - flow(cells)) / SLOPE_STEP_K
+        slope: Array = (flow(cells + SLOPE_STEP_K) - flow(cells)) / SLOPE_STEP_K
+        return slope
+
+
+def _gathered(cell: Ints, watts: Array, n: int) -> Array:
+    """Sum of the watts (p,) that belong to each of n cells."""
+    return np.bincount(cell, watts, n).astype(np.float64)

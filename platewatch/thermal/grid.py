@@ -13,6 +13,7 @@ import numpy as np
 import shapely
 from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
+from shapely.geometry.base import BaseGeometry
 
 from platewatch.errors import PlateError
 from platewatch.thermal.plate import Plate, Rectangle, Shape, geometry
@@ -93,7 +94,8 @@ def build_grid(plate: Plate, cell_m: float | None = None) -> Grid:
         fraction, east, north = _cut_faces(domain, x0, y0, hx, hy, nx, ny)
     index = _numbered(fraction, east, north)
     rows, columns = np.nonzero(index >= 0)
-    x, y = x0 + (columns + 0.5) * hx, y0 + (rows + 0.5) * hy
+    x: Array = np.asarray(x0 + (columns + 0.5) * hx, dtype=np.float64)
+    y: Array = np.asarray(y0 + (rows + 0.5) * hy, dtype=np.float64)
     return Grid(
         hx,
         hy,
@@ -111,7 +113,7 @@ def build_grid(plate: Plate, cell_m: float | None = None) -> Grid:
     )
 
 
-def footprint(grid: Grid, shape: Shape | shapely.Geometry) -> Array:
+def footprint(grid: Grid, shape: Shape | BaseGeometry) -> Array:
     """Area (n,) m2 that a shape covers in each cell; parts beyond the plate do not count."""
     full = grid.area > (1 - 1e-12) * grid.hx * grid.hy
     if isinstance(shape, Rectangle):
@@ -121,14 +123,19 @@ def footprint(grid: Grid, shape: Shape | shapely.Geometry) -> Array:
         high = np.minimum(low + grid.hy, top_most) - np.maximum(low, shape.y_m)
         covered = np.maximum(wide, 0) * np.maximum(high, 0)
         open_cells = np.flatnonzero(~full & (covered > 0))
-        region = shapely.box(shape.x_m, shape.y_m, right_most, top_most)
+        region: BaseGeometry = shapely.box(shape.x_m, shape.y_m, right_most, top_most)
     else:
-        region = shape if isinstance(shape, shapely.Geometry) else geometry(shape)
+        region = _valid(shape if isinstance(shape, BaseGeometry) else geometry(shape))
         covered = np.zeros(grid.n)
         open_cells = np.arange(grid.n)
     if open_cells.size:
         covered[open_cells] = _overlap(grid, region.intersection(grid.domain), open_cells)
-    return covered
+    return np.asarray(covered, dtype=np.float64)
+
+
+def on_plate(grid: Grid, x: float, y: float) -> bool:
+    """Whether a point, metres, lies on the plate; its rim counts."""
+    return bool(grid.domain.distance(shapely.Point(x, y)) <= 1e-9)
 
 
 def point_row(grid: Grid, x: float, y: float) -> Array:
@@ -156,20 +163,26 @@ def point_row(grid: Grid, x: float, y: float) -> Array:
 
 
 def _domain(plate: Plate) -> shapely.Polygon:
-    domain = geometry(plate.outline)
+    domain = _valid(geometry(plate.outline))
     if plate.holes:
-        domain = domain.difference(shapely.union_all([geometry(hole) for hole in plate.holes]))
+        domain = domain.difference(
+            shapely.union_all([_valid(geometry(hole)) for hole in plate.holes])
+        )
     if not isinstance(domain, shapely.Polygon) or domain.area <= 0:
         raise PlateError(
             f"plate {plate.name!r}: its holes leave nothing, or separate pieces; "
             "correct the holes, or describe each piece as a plate of its own"
         )
-    if not domain.is_valid:
-        raise PlateError(
-            f"plate {plate.name!r}: the outline crosses itself "
-            f"({shapely.is_valid_reason(domain)}); put its corners in order"
-        )
     return domain
+
+
+def _valid(shape: BaseGeometry) -> BaseGeometry:
+    if not shape.is_valid:
+        raise PlateError(
+            f"a shape crosses itself ({shapely.is_valid_reason(shape)}, metres); "
+            "put its corners in order"
+        )
+    return shape
 
 
 def _full_faces(nx: int, ny: int) -> tuple[Array, Array, Array]:
@@ -183,9 +196,9 @@ def _cut_faces(
     shapely.prepare(domain)
     left, low = np.meshgrid(x0 + hx * np.arange(nx), y0 + hy * np.arange(ny))
     boxes = shapely.box(left, low, left + hx, low + hy)
-    fraction = shapely.covers(domain, boxes).astype(float)
+    fraction: Array = shapely.covers(domain, boxes).astype(np.float64)
     cut = (fraction == 0) & shapely.intersects(domain, boxes)
-    fraction[cut] = shapely.area(shapely.intersection(domain, boxes[cut])) / (hx * hy)
+    fraction[cut] = np.asarray(shapely.area(shapely.intersection(domain, boxes[cut]))) / (hx * hy)
     east = np.minimum(fraction[:, :-1], fraction[:, 1:])
     cut = (east > 0) & (east < 1)
     right, bottom = left[:, :-1][cut] + hx, low[:, :-1][cut]
@@ -199,8 +212,8 @@ def _cut_faces(
 
 def _open_lengths(domain: shapely.Polygon, x0: Array, y0: Array, x1: Array, y1: Array) -> Array:
     ends = np.stack((np.column_stack((x0, y0)), np.column_stack((x1, y1))), axis=1)
-    lengths: Array = shapely.length(shapely.intersection(domain, shapely.linestrings(ends)))
-    return lengths
+    cut = shapely.intersection(domain, shapely.linestrings(ends))
+    return np.asarray(shapely.length(cut), dtype=np.float64)
 
 
 def _numbered(fraction: Array, east: Array, north: Array) -> Ints:
@@ -241,13 +254,13 @@ def _links(index: Ints, east: Array, north: Array, hx: float, hy: float) -> Link
     )
 
 
-def _overlap(grid: Grid, region: shapely.Geometry, cells: Ints) -> Array:
+def _overlap(grid: Grid, region: BaseGeometry, cells: Ints) -> Array:
     left, low = grid.x[cells] - grid.hx / 2, grid.y[cells] - grid.hy / 2
     boxes = shapely.box(left, low, left + grid.hx, low + grid.hy)
     shapely.prepare(region)
-    area = np.where(shapely.covers(region, boxes), grid.hx * grid.hy, 0.0)
+    area: Array = np.where(shapely.covers(region, boxes), grid.hx * grid.hy, 0.0)
     cut = (area == 0) & shapely.intersects(region, boxes)
-    area[cut] = shapely.area(shapely.intersection(region, boxes[cut]))
+    area[cut] = np.asarray(shapely.area(shapely.intersection(region, boxes[cut])))
     return area
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 
@@ -73,7 +74,8 @@ def bend(
         T = V @ v
         capacity = equations.capacity(T)
         heat = equations.rate(T, full.u)
-        return np.linalg.solve(V.T @ (capacity[:, None] * V), V.T @ heat)
+        mass = V.T @ (capacity[:, None] * V)
+        return np.asarray(np.linalg.solve(mass, V.T @ heat), dtype=np.float64)
 
     def by_reduced(v: Array) -> Array:
         extra = 0.0 if quadrature is None else quadrature.excess(v, full.u)
@@ -90,8 +92,7 @@ def _stepped(rates: Array, dt: Array, a: Array, slope: Callable[[Array], Array])
     states = []
     ones = np.ones(rates.size)
     for each in dt:
-        pivot = 1 / (GAMMA * each) + rates
-        factored = Factored(float(each), lambda q, pivot=pivot: q / pivot)
+        factored = Factored(float(each), partial(np.multiply, 1 / (1 / (GAMMA * each) + rates)))
         a = one_step(ones, lambda _t, v: slope(v), factored, 0.0, a)[0]
         states.append(a)
     return np.array(states)

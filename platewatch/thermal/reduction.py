@@ -193,7 +193,7 @@ def _orthonormal(columns: Array, capacity: Array) -> Array:
 
 
 def _rank(fixed: Array, capacity: Array) -> int:
-    return _orthonormal(fixed, capacity).shape[1]
+    return int(_orthonormal(fixed, capacity).shape[1])
 
 
 def _principal(model: ThermalModel, basis: Array) -> tuple[Array, Array]:

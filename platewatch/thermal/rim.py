@@ -92,7 +92,7 @@ def _cell_of(
     inside = (middle + NUDGE * min(hx, hy) * inward - (x0, y0)) / (hx, hy)
     column = np.clip(np.floor(inside[:, 0]).astype(int), 0, index.shape[1] - 1)
     row = np.clip(np.floor(inside[:, 1]).astype(int), 0, index.shape[0] - 1)
-    cell = index[row, column]
+    cell: Ints = index[row, column]
     for lost in np.flatnonzero(cell < 0):  # its sliver was dropped: the nearest cell takes it
         cell[lost] = np.argmin(np.hypot(x - middle[lost, 0], y - middle[lost, 1]))
     return cell
@@ -136,7 +136,8 @@ def _covers(
     if edge.side is not None:
         # A side is the rim that faces that way more than any other.
         facing = outward @ np.asarray(SIDE_NORMAL[edge.side])
-        return facing > np.sqrt(0.5) + 1e-9
+        faces_it: NDArray[np.bool_] = facing > np.sqrt(0.5) + 1e-9
+        return faces_it
     if not isinstance(plate.outline, Polygon):
         raise PlateError("edge: only a polygon has segments; name a side, or leave both out")
     points = np.asarray(plate.outline.points_m)

@@ -85,12 +85,14 @@ def integrate(
     times_s: Array,
     tolerance_K: float = 1e-3,
     linear: bool = False,
+    watch: Callable[[float, Array, float, Array], None] | None = None,
 ) -> Array:
     """T (t, n) at times_s (t,), rising, from `initial` (n,) at 0 s.
 
     capacity (n,) J/K;  rate(t, T) (n,) W;  stiffness(t, T): -d rate / dT, W/K
     linear: the stiffness never changes, so a factorisation lives as long as its step size
     tolerance_K: error allowed per step at the worst cell
+    watch: is told every accepted step, from (t, T) to (t, T)
     Raises PlateError when the steps become absurdly many.
     """
     T, t = np.array(initial, dtype=np.float64), 0.0
@@ -99,7 +101,7 @@ def integrate(
     dt = _first_step(capacity, rate(0.0, T), tolerance_K, float(times[-1]))
     factored: Factored | None = None
     steps = 0
-    for row, goal in enumerate(times):
+    for row, goal in enumerate(times.tolist()):
         while goal - t > 1e-9 * max(goal, 1.0):
             count = np.ceil((goal - t) / dt * (1 - 1e-9))
             use = (goal - t) / count if count < 4 else dt
@@ -115,6 +117,8 @@ def integrate(
                 )
             growth = 0.9 / max(worst, 1e-6) ** (1 / 3)
             if worst <= 1.0:
+                if watch is not None:
+                    watch(t, T, t + use, after)
                 t, T = t + use, after
                 if linear and 1.0 <= growth < 1.8:
                     growth = 1.0  # a kept factorisation is worth more than a longer step
