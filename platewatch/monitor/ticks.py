@@ -23,7 +23,7 @@ from dataclasses import replace
 from platewatch.types import Action, BatchEvent, Flag, Reading, Tick
 
 GAP_US = 600_000_000  # empty ticks are made one by one for this long, then as one
-GRACE_US = 10_000_000  # after a hold, before the clock may close ticks again
+GRACE_US = 10_000_000  # after a broken bus is back, before the clock closes ticks again
 
 
 class Ticker:
@@ -58,8 +58,7 @@ class Ticker:
         self._last_data = 0
         self._newest: int | None = None
         self._quiet_since: int | None = None
-        self._held = False
-        self._resumed: int | None = None
+        self._not_before: int | None = None
         self._actions: list[tuple[int | None, Action]] = []
         self._events: list[BatchEvent] = []
 
@@ -118,13 +117,20 @@ class Ticker:
         count, so a clock that disagrees with the sources does no harm; give a steady
         one (`Clock.monotonic`), for a step of it would count as silence.
 
-        None: no clock.  That is a replay, or a live bus known to be down: its ticks
-        then wait, and a backlog still finds them open.  The clock counts again GRACE_US
-        after the first call with a time.
+        None: by stamps only, as in a replay.
         """
         by_stamp = None if self._newest is None else self._newest - self.late_us
         by_clock = self._clock_limit(now_us)
         return self._close_up_to(by_stamp, by_clock)
+
+    def hold(self, now_us: int) -> None:
+        """The bus is known to be down: the clock closes nothing until GRACE_US after.
+
+        Called at every turn of the loop while it is down; a backlog then still finds
+        its ticks open.
+        """
+        self._quiet_for(now_us)
+        self._not_before = now_us + self._grace_us
 
     def finish(self, until_us: int | None = None) -> list[Tick]:
         """Close what is left: every tick with a reading, at the end of a log or a run.
@@ -150,15 +156,17 @@ class Ticker:
     def _clock_limit(self, now_us: int | None) -> int | None:
         """The source time up to which the clock closes ticks, None if not at all."""
         if now_us is None or self._newest is None:
-            self._held = now_us is None
             return None
-        if self._held:
-            self._held, self._resumed = False, now_us
+        quiet_us = self._quiet_for(now_us)
+        if self._not_before is not None and now_us < self._not_before:
+            return None
+        return self._newest + quiet_us - self.late_us
+
+    def _quiet_for(self, now_us: int) -> int:
+        """Since the first look at the clock after the newest reading."""
         if self._quiet_since is None:
             self._quiet_since = now_us
-        if self._resumed is not None and now_us - self._resumed < self._grace_us:
-            return None
-        return self._newest + (now_us - self._quiet_since) - self.late_us
+        return now_us - self._quiet_since
 
     def _close_up_to(self, by_stamp: int | None, by_clock: int | None) -> list[Tick]:
         limits = [limit for limit in (by_stamp, by_clock) if limit is not None]
