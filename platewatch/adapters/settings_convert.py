@@ -42,6 +42,7 @@ A = TypeVar("A")
 B = TypeVar("B")
 
 DEFAULT_DEADBAND_K = 2.0
+DEFAULT_NOISE_K = 0.2
 
 
 def metres(mm: float) -> float:
@@ -167,7 +168,7 @@ class Converter:
             span_degC=None if span is None else (self.degC(span[0]), self.degC(span[1])),
             tolerance_class=entry.tolerance_class,
             lag_s=entry.lag_s,
-            noise_K=self.kelvins(entry.noise),
+            noise_K=DEFAULT_NOISE_K if entry.noise is None else self.kelvins(entry.noise),
             quantum_K=self.kelvins(entry.quantum),
             cold_junction=self._ambient(entry.cold_junction),
             junction_block=entry.junction_block,

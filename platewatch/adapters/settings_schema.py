@@ -157,8 +157,8 @@ def _items(key: str, value: Any) -> Iterator[tuple[Where, Any]]:
 
 def suggest(word: str, known: Iterable[str], otherwise: str = "write one of them") -> str:
     """'did you mean ...?' for a near miss, else what else to do."""
-    choices = {name.lower(): name for name in known}
-    near = difflib.get_close_matches(str(word).lower(), choices, n=1, cutoff=0.6)
+    choices = {name.lower(): str(name) for name in known}
+    near = difflib.get_close_matches(str(word).lower(), choices, n=1, cutoff=0.55)
     return f"did you mean {choices[near[0]]!r}?" if near else otherwise
 
 

@@ -61,8 +61,9 @@ class SensorEntry(Entry):
     tolerance_class: Annotated[str | None, BeforeValidator(_class_word)] = None
     lag_s: Annotated[float, Within(0, 3600, "give the sensor's lag in s, 0 or more")] = 0.0
     noise: Annotated[
-        float, Within(0, 50, "give the standard deviation of its noise, above 0", above=True)
-    ] = 0.2
+        float | None,
+        Within(0, 50, "give the standard deviation of its noise, above 0", above=True),
+    ] = None
     quantum: Annotated[float, Within(0, 50, "give the rounding step, 0 for none")] = 0.0
     cold_junction: AmbientOption = None
     junction_block: str = ""
