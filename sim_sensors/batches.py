@@ -146,7 +146,7 @@ def _load(plate: Plate, wish: Wish, *, announced: bool) -> LoadPutOn:
     """A cold steel mould on the zone's control thermocouple, cut to fit a small zone."""
     zone, under = _zone(plate, wish, 1), _sensor(plate, wish, 1)
     x0, y0, x1, y1 = bounds(zone.shapes[0])
-    side = min(MOULD_SIDE_M, 0.65 * min(x1 - x0, y1 - y0))
+    side = min(MOULD_SIDE_M, 0.7 * min(x1 - x0, y1 - y0))
     width, height = wish.width_m or side, wish.height_m or side
     x = under.x_m if wish.x_m is None else wish.x_m
     y = under.y_m if wish.y_m is None else wish.y_m

@@ -65,7 +65,9 @@ class Lattice:
     def gather(self, per_element: Array) -> Array:
         """A quantity per element (e,), a quarter to each of its corners: (n,)."""
         share = np.repeat(per_element / 4.0, 4)
-        return np.bincount(self.corners.ravel(), weights=share, minlength=self.nodes)
+        return np.asarray(
+            np.bincount(self.corners.ravel(), weights=share, minlength=self.nodes), dtype=float
+        )
 
     @property
     def element_area(self) -> Array:
@@ -85,8 +87,9 @@ class Lattice:
         hit = self._plate_samples(shape) * (self.hx * self.hy / SAMPLES**2)
         u, v = _sample_grid()
         corner = np.stack(((1 - u) * (1 - v), u * (1 - v), (1 - u) * v, u * v), axis=1)
-        return np.bincount(
-            self.corners.ravel(), weights=(hit @ corner).ravel(), minlength=self.nodes
+        return np.asarray(
+            np.bincount(self.corners.ravel(), weights=(hit @ corner).ravel(), minlength=self.nodes),
+            dtype=float,
         )
 
     def locate(self, x: float, y: float) -> tuple[Ints, Array]:

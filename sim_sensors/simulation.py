@@ -33,7 +33,7 @@ from sim_sensors.faults import (
     ZoneFault,
 )
 from sim_sensors.lattice import bounds
-from sim_sensors.thermometers import as_signal, follow
+from sim_sensors.thermometers import as_signal, follow, rounded
 from sim_sensors.truth import STATED_ERROR, ModelError, Truth
 
 LONGEST_STEP_S = 2.0
@@ -202,8 +202,8 @@ class Simulation:
 
     def _lift_loads(self) -> None:
         for fault in self._begun:
-            if isinstance(fault, LoadPutOn) and fault.off_s is not None and self.truth.loads:
-                if self.at_s >= fault.off_s:
+            match fault:
+                case LoadPutOn(off_s=float(off_s)) if self.truth.loads and self.at_s >= off_s:
                     self.truth.take_off()
                     self._tell_load("load-off", fault)
 
@@ -214,9 +214,7 @@ class Simulation:
             if zone.loop is not None:
                 shown = self._shown[zone.loop.sensor]
                 target = self._programme.set_point_degC
-                state = regulate(
-                    zone.loop, state, target, shown, self.sample_s, self.anti_windup
-                )
+                state = regulate(zone.loop, state, target, shown, self.sample_s, self.anti_windup)
             states.append(state)
         return tuple(states)
 
@@ -254,7 +252,7 @@ class Simulation:
         self._under, self._tips = now, np.array(tips)
 
     def _read(self, noise: Array) -> dict[str, float]:
-        """What each sensor's channel says, as degC before rounding: name to value."""
+        """What each instrument shows, degC by sensor; the loops act on this."""
         shown: dict[str, float] = {}
         for k, sensor in enumerate(self.plant.plate.sensors):
             value, spread = float(self._tips[k]), sensor.noise_K
@@ -263,10 +261,11 @@ class Simulation:
                 last = self._held.get(sensor.name, value)
                 value = fault.shown(value, room, self.at_s - fault.at_s, last)
                 spread *= fault.noise_factor
-            shown[sensor.name] = value + spread * noise[k] + self._bias.get(sensor.name, 0.0)
-        for fault in self._begun:
-            if isinstance(fault, Swapped):
-                a, b = fault.first, fault.second
+            value += spread * noise[k] + self._bias.get(sensor.name, 0.0) - sensor.correction_K
+            shown[sensor.name] = rounded(value, sensor.quantum_K)
+        for swap in self._begun:
+            if isinstance(swap, Swapped):
+                a, b = swap.first, swap.second
                 shown[a], shown[b] = shown[b], shown[a]
         return shown
 
@@ -283,8 +282,7 @@ class Simulation:
         values: dict[str, float] = {}
         for sensor in self.plant.plate.sensors:
             shown = self._shown[sensor.name]
-            missing = np.isnan(shown)
-            values[f"sensor/{sensor.name}"] = shown if missing else as_signal(sensor, shown)
+            values[f"sensor/{sensor.name}"] = as_signal(sensor, shown)
         for zone, loop in zip(self.plant.plate.zones, self._loops, strict=True):
             set_point = from_degC(self._programme.set_point_degC, unit)
             values[f"zone/{zone.name}/duty"] = round(loop.duty * zone.duty_full, 6)

@@ -6,7 +6,7 @@ import numpy as np
 
 from platewatch.errors import SettingsError
 from platewatch.thermal.plate import Sensor
-from platewatch.units import TemperatureUnit, difference_from_K, from_degC
+from platewatch.units import TemperatureUnit, from_degC
 
 PT100_A, PT100_B = 3.9083e-3, -5.775e-7  # IEC 60751, 0 degC and above
 
@@ -24,19 +24,18 @@ def follow(tip: float, before: float, now: float, lag_s: float, step_s: float) -
 
 
 def as_signal(sensor: Sensor, shown_degC: float) -> float:
-    """What the channel carries, in the unit the description declares for it."""
-    value = shown_degC - sensor.correction_K
+    """What the channel carries for a shown temperature; NaN stays NaN.
+
+    Raises SettingsError for a signal that the simulator cannot make.
+    """
     match sensor.signal:
         case "degC" | "degF" | "K":
-            unit = TemperatureUnit(sensor.signal)
-            quantum = difference_from_K(sensor.quantum_K, unit)
-            return rounded(from_degC(value, unit), quantum)
+            return round(from_degC(shown_degC, TemperatureUnit(sensor.signal)), 6)
         case "mA" if sensor.span_degC is not None:
             low, high = sensor.span_degC
-            return 4.0 + 16.0 * (rounded(value, sensor.quantum_K) - low) / (high - low)
+            return 4.0 + 16.0 * (shown_degC - low) / (high - low)
         case "ohm":
-            t = rounded(value, sensor.quantum_K)
-            return 100.0 * (1.0 + PT100_A * t + PT100_B * t * t)
+            return 100.0 * (1.0 + PT100_A * shown_degC + PT100_B * shown_degC**2)
     raise SettingsError(
         f"sensor {sensor.name}: the simulator cannot make a signal in {sensor.signal!r}; "
         "describe the sensor with degC, degF, K, ohm or mA for a simulated run"
@@ -44,5 +43,7 @@ def as_signal(sensor: Sensor, shown_degC: float) -> float:
 
 
 def rounded(value: float, quantum: float) -> float:
-    """To the nearest step, free of the tail of binary fractions."""
-    return round(round(value / quantum) * quantum, 9) if quantum > 0 else value
+    """To the nearest step, free of the tail of binary fractions; NaN stays NaN."""
+    if quantum <= 0 or np.isnan(value):
+        return value
+    return round(round(value / quantum) * quantum, 9)

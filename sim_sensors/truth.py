@@ -239,10 +239,9 @@ class Truth:
         n, loads = self.lattice.nodes, len(self.loads)
         element_degC = at[self.lattice.corners].mean(axis=1)
         sheet = sum((m.k.at(element_degC) * d for m, d in self._plies), start=np.zeros(1))
-        A = sparse.lil_array((n + loads, n + loads))
-        A[:n, :n] = self.lattice.conduction(self.error.k * np.asarray(sheet))
-        A = sparse.csr_array(A)
+        conduction = self.lattice.conduction(self.error.k * np.asarray(sheet))
         outward, forcing = self._links(np.asarray(sheet))
+        A = sparse.csr_array(sparse.block_diag((conduction, sparse.csr_array((loads, loads)))))
         for k, load in enumerate(self.loads):
             A = A + _bond(n + loads, n + k, load.conductance * self._covers[k])
         A = sparse.csr_array(A + sparse.diags_array(outward))
