@@ -289,7 +289,9 @@ def _march(
 
     linear = constant and all(face.is_linear for face in equations.model.faces)
     times = np.array([after_s])
-    return integrate(fixed, rate, stiffness, initial, times, tolerance_K, linear, watch)[0]
+    fields = integrate(fixed, rate, stiffness, initial, times, tolerance_K, linear, watch)
+    final: Array = fields[0]
+    return final
 
 
 def _result(equations: FullEquations, T: Array, after_s: float | None, energy: Energy) -> WhatIf:

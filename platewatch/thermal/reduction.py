@@ -19,7 +19,7 @@ from scipy.sparse.linalg import LinearOperator, eigsh
 
 from platewatch.errors import PlateError
 from platewatch.thermal.conduction import Input, ThermalModel
-from platewatch.thermal.grid import point_row
+from platewatch.thermal.grid import footprint, point_row
 from platewatch.thermal.heatup import bend, heat_up, missed
 from platewatch.thermal.quadrature import Quadrature, build_quadrature
 from platewatch.thermal.rim import Ints
@@ -27,7 +27,7 @@ from platewatch.thermal.stepping import lu
 from platewatch.types import Array
 
 MOST_EIGENMODES = 48
-LEAST_EIGENMODES = 16
+LEAST_EIGENMODES = 27  # they carry what no description names: loads, faults
 FEW_ZONES = 4  # up to here two transient fields a zone, else one
 DECAY = (40.0, 10.0)  # of the transient fields, in diffusivity / area of a zone
 
@@ -140,9 +140,10 @@ def static_correction(reduced: ReducedModel, q: Array) -> tuple[Array, float]:
 
 
 def _static_fields(model: ThermalModel) -> Array:
-    """(n, k): constant, the settled response to every input and to the offset, then the
-    zones' response to heat that grows as exp(s t): what they do shortly after a step."""
-    heat = np.column_stack((model.B, model.offset))
+    """(n, k): constant, the settled response to every input, load place and to the offset,
+    then the zones' response to heat that grows as exp(s t): what they do shortly after a step."""
+    places = [footprint(model.grid, contact.shape) for contact in model.plate.contacts]
+    heat = np.column_stack((model.B, model.offset, *places))
     heat = heat[:, np.abs(heat).max(axis=0) > 0]
     answers = [model.static(heat)] if heat.size else []
     zones = model.B[:, : len(model.plate.zones)]
