@@ -9,9 +9,19 @@ from typing import Any, Protocol
 
 from platewatch import units
 from platewatch.adapters import messages_decode as decoding
-from platewatch.adapters.messages_decode import Reason, Sample, Unreadable
+from platewatch.adapters.messages_decode import Reason, Sample, Unreadable, Unusable
 from platewatch.errors import SettingsError
 from platewatch.types import BatchEvent, Flag, Reading
+
+__all__ = [
+    "Decoded",
+    "Mapped",
+    "Reason",
+    "Refusal",
+    "Route",
+    "Routes",
+    "channel_units",
+]
 
 LARGEST_PAYLOAD = 65_536  # bytes
 FUTURE_US = 120_000_000  # how far a source clock may be ahead of ours
@@ -188,7 +198,7 @@ class Routes:
             case "flat":
                 return self._read_flat(arrived)
             case _:
-                samples = self._read_senml(arrived)
+                return self._read_senml(arrived)
         return self._judge_all(arrived, samples)
 
     def _read_flat(self, arrived: _Arrived) -> Decoded:
@@ -209,19 +219,28 @@ class Routes:
         judged = self._judge_all(arrived, samples)
         return Decoded(judged.readings, tuple(events), (*judged.refusals, *refusals))
 
-    def _read_senml(self, arrived: _Arrived) -> list[Sample]:
+    def _read_senml(self, arrived: _Arrived) -> Decoded:
         """The records of a pack under channel names.
 
         A topic of one channel takes the records that `value` names, or else all.
         """
-        samples = list(decoding.read_senml(arrived.payload, arrived.seen_us))
         route = arrived.route
-        if route.means != READINGS:
-            chosen = [s for s in samples if not route.value or s.name == route.value]
-            if not chosen:
-                raise Unreadable(Reason.NO_VALUE, f"no record {route.value!r} in the pack")
-            return [Sample(route.means, s.value, s.at_us, s.unit) for s in chosen]
-        return [Sample(s.name.removeprefix(self._root), s.value, s.at_us, s.unit) for s in samples]
+        samples, refusals = [], []
+        for found in decoding.read_senml(arrived.payload, arrived.seen_us):
+            if route.means == READINGS:
+                channel = found.name.removeprefix(self._root)
+            elif route.value in ("", found.name):
+                channel = route.means
+            else:
+                continue
+            if isinstance(found, Unusable):
+                refusals.append(_refusal(arrived, found.error, channel))
+            else:
+                samples.append(Sample(channel, found.value, found.at_us, found.unit))
+        if not samples and not refusals and route.value:
+            raise Unreadable(Reason.NO_VALUE, f"no record {route.value!r} in the pack")
+        judged = self._judge_all(arrived, samples)
+        return Decoded(judged.readings, (), (*judged.refusals, *refusals))
 
     def _judge_all(self, arrived: _Arrived, samples: Iterable[Sample]) -> Decoded:
         readings, refusals = [], []

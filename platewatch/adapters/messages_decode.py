@@ -61,6 +61,14 @@ class Sample:
     unit: str = ""
 
 
+@dataclass(frozen=True, slots=True)
+class Unusable:
+    """A record of a pack that holds no usable number; the others still count."""
+
+    name: str
+    error: Unreadable
+
+
 _number = msgspec.json.Decoder(float)
 
 
@@ -195,8 +203,8 @@ _pack = msgspec.json.Decoder(list[_Record])
 _member_names = msgspec.json.Decoder(list[dict[str, msgspec.Raw]])
 
 
-def read_senml(payload: bytes, seen_us: int) -> Iterator[Sample]:
-    """The numeric records of a SenML pack (RFC 8428), base values resolved.
+def read_senml(payload: bytes, seen_us: int) -> list[Sample | Unusable]:
+    """The records of a SenML pack (RFC 8428), base values resolved.
 
     A time below 2**28 is relative to arrival, so it is no source time: at_us is then
     arrival plus the time, and `at_us is None` only for a record without any time.
@@ -211,7 +219,7 @@ def read_senml(payload: bytes, seen_us: int) -> Iterator[Sample]:
         raise Unreadable(Reason.NOT_A_NUMBER, f"no SenML pack: {error}") from None
     except ValueError as error:
         raise Unreadable(Reason.NOT_JSON, str(error)) from None
-    yield from _resolve(records, seen_us)
+    return list(_resolve(records, seen_us))
 
 
 def _refuse_must_understand(records: list[dict[str, msgspec.Raw]]) -> None:
@@ -220,17 +228,21 @@ def _refuse_must_understand(records: list[dict[str, msgspec.Raw]]) -> None:
         raise Unreadable(Reason.NOT_JSON, f"SenML member {name!r} must be understood and is not")
 
 
-def _resolve(records: list[_Record], seen_us: int) -> Iterator[Sample]:
+def _resolve(records: list[_Record], seen_us: int) -> Iterator[Sample | Unusable]:
     base = _Record(bt=0.0, bv=0.0)
     for record in records:
         base = _with_bases(base, record)
-        if record.v is None and record.bv is None:
-            if record.s is not None or (record.vs, record.vb, record.vd) != (None, None, None):
-                name = base.bn + record.n
-                raise Unreadable(Reason.NOT_A_NUMBER, f"record {name!r} has no number v")
-            if not record.n and record.t is None:
-                continue  # bases only
-        yield _sample(base, record, seen_us)
+        name = base.bn + record.n
+        if record.v is None:
+            others = (record.vs, record.vb, record.vd, record.s, record.t, record.n or None)
+            if any(other is not None for other in others):
+                reason = Unreadable(Reason.NOT_A_NUMBER, f"record {name!r} has no number v")
+                yield Unusable(name, reason)
+            continue
+        try:
+            yield _sample(name, base, record, record.v, seen_us)
+        except Unreadable as error:
+            yield Unusable(name, error)
 
 
 def _with_bases(base: _Record, record: _Record) -> _Record:
@@ -244,8 +256,7 @@ def _with_bases(base: _Record, record: _Record) -> _Record:
     )
 
 
-def _sample(base: _Record, record: _Record, seen_us: int) -> Sample:
-    name = base.bn + record.n
+def _sample(name: str, base: _Record, record: _Record, v: float, seen_us: int) -> Sample:
     seconds = (base.bt or 0.0) + (record.t or 0.0)
     at_us: int | None = None
     if seconds >= SENML_ABSOLUTE_S:
@@ -254,7 +265,7 @@ def _sample(base: _Record, record: _Record, seen_us: int) -> Sample:
         raise Unreadable(Reason.FUTURE, f"record {name!r} is {seconds:g} s ahead")
     elif seconds < 0:
         at_us = seen_us + round(seconds * 1e6)
-    value = (base.bv or 0.0) + (record.v or 0.0)
+    value = (base.bv or 0.0) + v
     unit = record.u if record.u is not None else base.bu or ""
     return Sample(name, value, at_us, unit)
 
