@@ -2,19 +2,77 @@
 
 from __future__ import annotations
 
+import hashlib
+import queue
+from dataclasses import replace
 from pathlib import Path
 
+from platewatch.adapters.broker import EmbeddedBroker
+from platewatch.adapters.bus import Arrival, Bus, BusEvent, Token
+from platewatch.adapters.logs import LogReader, LogReport, load_columns, read_log
+from platewatch.adapters.logs_write import write_wide_log
+from platewatch.adapters.messages import Decoded, Refusal, Routes
+from platewatch.adapters.messages_send import (
+    alarm_message,
+    alarm_topic,
+    alive_message,
+    peak_message,
+    topic_of,
+)
 from platewatch.adapters.settings import Description, load
+from platewatch.adapters.storage import DatabaseBusyError, DiskFullError, Run, Store
+from platewatch.adapters.tables_out import write_table
+from platewatch.clock import Clock
+from platewatch.errors import SettingsError
 from platewatch.monitor.estimator import build_quiet
 from platewatch.monitor.loops import build_loops
 from platewatch.monitor.peak import places, standard_draws
 from platewatch.monitor.pipeline import Monitor
+from platewatch.session import Session
 from platewatch.thermal.conduction import build_model
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import reduce
 from platewatch.units import TemperatureUnit
 
+__all__ = [
+    "Arrival",
+    "Bus",
+    "BusEvent",
+    "DatabaseBusyError",
+    "Decoded",
+    "Description",
+    "DiskFullError",
+    "EmbeddedBroker",
+    "LogReader",
+    "LogReport",
+    "Monitor",
+    "Refusal",
+    "Routes",
+    "Run",
+    "Session",
+    "Store",
+    "Token",
+    "alarm_message",
+    "alarm_topic",
+    "alive_message",
+    "build_bus",
+    "build_monitor",
+    "build_routes",
+    "describe",
+    "load_columns",
+    "open_store",
+    "peak_message",
+    "read_log",
+    "resume_session",
+    "topic_of",
+    "with_broker",
+    "with_limits",
+    "write_table",
+    "write_wide_log",
+]
+
 REFERENCE_DEGC = 100.0  # where losses are linearised when no recipe names a set-point
+LONGEST_QUEUE = 20_000  # messages between the network and the estimator
 
 
 def describe(path: Path) -> Description:
@@ -22,10 +80,16 @@ def describe(path: Path) -> Description:
     return load(path)
 
 
+def reference_degC(description: Description) -> float:
+    """Where the losses of a plate are linearised."""
+    reference = description.plate.reference_degC
+    return REFERENCE_DEGC if reference is None else reference
+
+
 def build_monitor(description: Description) -> Monitor:
     """The estimator, forecast and alarms of one plate."""
     plate = description.plate
-    reference = plate.reference_degC if plate.reference_degC is not None else REFERENCE_DEGC
+    reference = reference_degC(description)
     reduced = reduce(build_model(plate, build_grid(plate), reference))
     quiet = build_quiet(plate, reduced, reference)
     limits = description.alarm_limits
@@ -41,3 +105,83 @@ def build_monitor(description: Description) -> Monitor:
         forecast=description.forecast,
         unit=TemperatureUnit(description.unit),
     )
+
+
+def build_routes(description: Description) -> Routes:
+    """Every topic and channel of one plate."""
+    plate = description.plate
+    return Routes(
+        plate.name,
+        sensors={sensor.name: sensor.signal for sensor in plate.sensors},
+        zones={zone.name: zone.duty_full for zone in plate.zones},
+        surrounds=surround_channels(description),
+        unit=str(description.unit),
+        maps=description.channels,
+    )
+
+
+def surround_channels(description: Description) -> tuple[str, ...]:
+    """Bus channels that the plate's surfaces, edges, clamps and cold junctions name."""
+    plate = description.plate
+    named: list[object] = []
+    for surface in (plate.top, plate.bottom):
+        named += [surface.ambient, surface.surroundings]
+    for edge in plate.edges:
+        named += [edge.ambient, edge.held]
+    named += [clamp.ambient for clamp in plate.clamps]
+    named += [sensor.cold_junction for sensor in plate.sensors]
+    return tuple(dict.fromkeys(name for name in named if isinstance(name, str)))
+
+
+def with_broker(description: Description, broker: str) -> Description:
+    """The description with another broker, HOST:PORT; raises SettingsError if it is none."""
+    host, separator, port = broker.rpartition(":")
+    if not separator:
+        host, port = broker, str(description.bus.port)
+    if not host or not port.isdecimal() or not 1 <= int(port) <= 65_535:
+        raise SettingsError(f"--broker {broker!r} is not HOST:PORT; write 127.0.0.1:1883")
+    bus = replace(description.bus, host=host.strip("[]"), port=int(port))
+    return replace(description, bus=bus)
+
+
+def build_bus(
+    description: Description, routes: Routes, sink: queue.Queue[Arrival], clock: Clock, run: int
+) -> Bus:
+    """The connection of one plate; it connects when started."""
+    bus = description.bus
+    return Bus(
+        description.plate.name,
+        routes.topics,
+        sink,
+        clock,
+        host=bus.host,
+        port=bus.port,
+        client_name=bus.client_name,
+        user=bus.user,
+        secret_file=bus.secret_file,
+        ca_file=bus.ca_file,
+        publish=bus.publish,
+        will=alive_message("lost", clock.utc_us(), run),
+        keepalive_s=bus.keepalive_s,
+    )
+
+
+def open_store(url: str, *, create: bool = True, read_only: bool = False) -> Store:
+    """The record at a database URL or a plain path."""
+    return Store.open(url, create=create, read_only=read_only)
+
+
+def resume_session(monitor: Monitor, store: Store, plate: str, closed_us: int | None) -> Session:
+    """A run that begins where the record ends."""
+    alarms = {(event.alarm, event.subject): event.to_state for event in store.alarm_states(plate)}
+    return Session(monitor, closed_us=closed_us, shot=store.last_shot(plate), alarms=alarms)
+
+
+def with_limits(description: Description, other: Description) -> Description:
+    """The description with the alarm limits of another one of the same plate."""
+    if other.plate.name != description.plate.name:
+        raise SettingsError(
+            f"{other.path}: describes plate {other.plate.name!r}, not {description.plate.name!r}"
+        )
+    both = hashlib.sha256((description.sha256 + other.sha256).encode())
+    return replace(description, alarm_limits=other.alarm_limits, sha256=both.hexdigest())

@@ -17,12 +17,13 @@ _HEADER = struct.Struct("<4sHII")  # magic, version, states n, drive length k
 def pack_state(shot: FieldShot) -> bytes:
     """Mean (n,), drive (k,) and the upper triangle of cov (n, n), little-endian.
 
-    Raises StorageError if the shapes disagree or a value is not finite.
+    Raises StorageError if the shapes disagree or a value of mean or cov is not finite; the
+    drive may hold NaN for what was never heard.
     """
     n, k = shot.mean.size, shot.drive.size
     if shot.cov.shape != (n, n):
         raise StorageError(f"state of {n} values with a covariance of shape {shot.cov.shape}")
-    if not all(np.isfinite(part).all() for part in (shot.mean, shot.cov, shot.drive)):
+    if not all(np.isfinite(part).all() for part in (shot.mean, shot.cov)):
         raise StorageError(f"state at {shot.at_us} us holds a value that is not finite")
     triangle = shot.cov[np.triu_indices(n)]
     return b"".join(

@@ -1,0 +1,101 @@
+"""The commands that run a plate: the daemon, the demonstration, the replay."""
+
+from __future__ import annotations
+
+import json
+import signal
+import sys
+import threading
+from argparse import Namespace
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+from platewatch import compose
+from platewatch.cli_words import moment, replay_summary, row_progress
+from platewatch.clock import SystemClock
+from platewatch.daemon import run_daemon
+from platewatch.daemon_words import open_log
+from platewatch.errors import SettingsError
+
+
+def run(arguments: Namespace) -> int:
+    """Watch plates until told to stop."""
+    descriptions = [compose.describe(Path(name)) for name in arguments.plates]
+    if arguments.broker:
+        descriptions = [compose.with_broker(each, arguments.broker) for each in descriptions]
+    names = [each.plate.name for each in descriptions]
+    twice = next((name for name in names if names.count(name) > 1), "")
+    if twice:
+        raise SettingsError(f"plate {twice!r} is described twice; give each plate its own name")
+    log = open_log(arguments.json_log)
+    with stop_on_signals() as stop:
+        run_daemon(
+            descriptions,
+            SystemClock(),
+            log,
+            stop,
+            database=arguments.db,
+            for_s=arguments.for_s,
+        )
+    return 0
+
+
+@contextmanager
+def stop_on_signals() -> Iterator[threading.Event]:
+    """An event that SIGTERM and SIGINT set; what they did before comes back at the end."""
+    stop = threading.Event()
+    if threading.current_thread() is not threading.main_thread():
+        yield stop
+        return
+    before = {
+        number: signal.signal(number, lambda *_: stop.set())
+        for number in (signal.SIGTERM, signal.SIGINT)
+    }
+    try:
+        yield stop
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+def demo(arguments: Namespace) -> int:
+    """The simulated plate, watched."""
+    from platewatch.demo import run_demo
+
+    with stop_on_signals() as stop:
+        return run_demo(
+            arguments.batch,
+            Path(arguments.data),
+            stop,
+            speed=arguments.speed,
+            for_s=arguments.for_s,
+            port=arguments.port,
+        )
+
+
+def replay(arguments: Namespace) -> int:
+    """Recorded readings into a new record; 1 if an alarm was raised."""
+    from platewatch.replay import Wishes, replay_log
+
+    description = compose.describe(Path(arguments.plate))
+    if arguments.limits:
+        description = compose.with_limits(description, compose.describe(Path(arguments.limits)))
+    if arguments.speed is not None and not arguments.speed > 0:
+        raise SettingsError(f"--speed {arguments.speed:g} is not above 0; leave it out to go fast")
+    wishes = Wishes(
+        from_us=moment("--from", arguments.from_time),
+        to_us=moment("--to", arguments.to_time),
+        speed=arguments.speed,
+        columns=Path(arguments.columns) if arguments.columns else None,
+        offset=arguments.offset,
+    )
+    with row_progress(sys.stderr) as told:
+        summary = replay_log(
+            description, Path(arguments.log), Path(arguments.db), SystemClock(), wishes, told
+        )
+    if arguments.json:
+        print(json.dumps(summary.as_dict(), indent=2))
+    else:
+        print(replay_summary(summary))
+    return 1 if summary.raised else 0
