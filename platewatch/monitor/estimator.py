@@ -29,10 +29,15 @@ from platewatch.types import Array, Gaussian
 BUMPS = 24  # nodes of the coarse mesh that carries the smooth unknown heat
 LEAST_LAG_S = 0.5  # a thermocouple without lag would only stiffen the arithmetic
 BIAS_WITHOUT_CLASS_K = 0.2
-POWER_MEMORY_S = 1800.0
+POWER_MEMORY_S = 900.0
 BUMP_MEMORY_S = 3600.0
 BIAS_MEMORY_S = 30 * 86400.0
 THETA_MEMORY_S = 30 * 86400.0
+# The readings may move theta only while the model fits: what an event does to them is
+# not the plate's conductivity.  Misfit is NIS per reading, averaged over MISFIT_S.
+MISFIT_S = 30.0
+MISFIT_MOST = 2.0
+MISFIT_AT_ONCE = 4.0
 # Half of the losses' relative uncertainty may differ from place to place.
 LOCAL_SHARE = 0.5
 
@@ -86,6 +91,7 @@ class FieldState:
 
     heater_W (nz,): output of the heaters as called for, after their lag
     called_W (nz,): last called watts;  around (nu,): last known temperatures
+    misfit: running mean of NIS per reading, 1 where the model fits
     """
 
     at_us: int
@@ -93,6 +99,7 @@ class FieldState:
     heater_W: Array
     called_W: Array
     around: Array
+    misfit: float = 1.0
 
 
 @dataclass(frozen=True)
@@ -268,7 +275,7 @@ def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
     spread[k.theta] = noise.theta
     cov[np.diag_indices(k.size)] += spread**2
     prior = Gaussian(mean, cov)
-    posterior, _ = _condition(quiet, prior, seen, prior.mean)
+    posterior, _ = _condition(quiet, prior, seen, prior.mean, 1.0)
     return FieldState(at_us, posterior, seen.called_end_W, seen.called_end_W, seen.around)
 
 
@@ -293,11 +300,24 @@ def advance(
 ) -> tuple[FieldState, Innovation]:
     """One tick: predict over dt_us, then take in what was read during it."""
     prior, heater_W = forecast_step(quiet, state, dt_us, seen.called_W, seen.around, seen)
-    posterior, innovation = _condition(quiet, prior, seen, state.belief.mean)
-    return (
-        FieldState(state.at_us + dt_us, posterior, heater_W, seen.called_end_W, seen.around),
-        innovation,
+    posterior, innovation = _condition(quiet, prior, seen, state.belief.mean, state.misfit)
+    moved = FieldState(
+        state.at_us + dt_us,
+        posterior,
+        heater_W,
+        seen.called_end_W,
+        seen.around,
+        _misfit(state.misfit, innovation, dt_us),
     )
+    return moved, innovation
+
+
+def _misfit(before: float, innovation: Innovation, dt_us: int) -> float:
+    """Running mean of NIS per reading over MISFIT_S."""
+    if not innovation.rows:
+        return before
+    keep = float(np.exp(-dt_us / 1e6 / MISFIT_S))
+    return keep * before + (1 - keep) * innovation.nis / len(innovation.rows)
 
 
 def forecast_step(
@@ -328,7 +348,7 @@ def forecast_step(
 
 
 def _condition(
-    quiet: Quiet, prior: Gaussian, seen: Observed, before: Array
+    quiet: Quiet, prior: Gaussian, seen: Observed, before: Array, misfit: float
 ) -> tuple[Gaussian, Innovation]:
     """Take in the readings; one taken inside the tick is compared with the mean
     expected at its own instant, between the start and the end of the tick."""
@@ -337,7 +357,13 @@ def _condition(
     share = seen.share
     expected = share * (H @ prior.mean) + (1 - share) * (H @ before)
     variance = quiet.noise_var[rows] / seen.count
-    return update(prior, seen.degC, H, variance, seen.sensors, expected)
+    theta = quiet.blocks.theta
+    frozen = theta if misfit > MISFIT_MOST else None
+    args = (prior, seen.degC, H, variance, seen.sensors, expected)
+    posterior, innovation = update(*args, considered=frozen)
+    if frozen is None and innovation.nis > MISFIT_AT_ONCE * len(rows):
+        return update(*args, considered=theta)
+    return posterior, innovation
 
 
 def restarted(quiet: Quiet, state: FieldState, at_us: int) -> FieldState:
@@ -346,4 +372,4 @@ def restarted(quiet: Quiet, state: FieldState, at_us: int) -> FieldState:
     if gap_us <= 0:
         return replace(state, at_us=at_us)
     belief, heater_W = forecast_step(quiet, state, gap_us, state.called_W, state.around)
-    return FieldState(at_us, belief, heater_W, state.called_W, state.around)
+    return FieldState(at_us, belief, heater_W, state.called_W, state.around, state.misfit)

@@ -43,15 +43,20 @@ def update(
     R: Array,
     rows: tuple[int, ...] | None = None,
     expected: Array | None = None,
+    considered: slice | None = None,
 ) -> tuple[Gaussian, Innovation]:
     """Condition the state on one set of readings.
 
     prior: mean (n,), cov (n, n);  z: readings (m,);  H (m, n)
     R: variances (m,) of independent readings;  rows: their names, for the record
     expected: what was expected of z, where that is not H @ mean
+    considered: states whose uncertainty counts but which these readings may not move
+
 
     The covariance is (I - K H) P (I - K H)' + K R K', evaluated as products of
-    low rank.  Source: Bucy & Joseph, Filtering for Stochastic Processes (1968).
+    low rank; it holds for any gain K.  Sources: Bucy & Joseph, Filtering for Stochastic
+    Processes (1968); for considered states Schmidt, Application of State-Space Methods
+    to Navigation Problems (1966), from memory.
     Raises ShapeError before computing anything if the shapes disagree.
     """
     n, m = prior.mean.size, z.size
@@ -70,6 +75,8 @@ def update(
     residual = z - (H @ prior.mean if expected is None else expected)
     whitened = cho_solve(factor, residual, check_finite=False)
     K = cho_solve(factor, HP, check_finite=False).T
+    if considered is not None:
+        K[considered] = 0.0
     W = prior.cov - K @ HP
     cov = W - (W @ H.T) @ K.T
     cov += (K * R) @ K.T

@@ -127,10 +127,12 @@ def resume(
     if shot is None or shot.basis != quiet.reduced.basis_hash:
         return state
     nz, nu = len(quiet.zone_u), len(quiet.around_u)
-    if shot.mean.size != quiet.blocks.size or shot.drive.size != 3 * nz + nu:
+    if shot.mean.size != quiet.blocks.size or shot.drive.size != 3 * nz + nu + 1:
         return state
-    heater, called, duty, around = np.split(shot.drive, [nz, 2 * nz, 3 * nz])
-    field_state = FieldState(shot.at_us, Gaussian(shot.mean, shot.cov), heater, called, around)
+    heater, called, duty, around, rest = np.split(shot.drive, [nz, 2 * nz, 3 * nz, 3 * nz + nu])
+    field_state = FieldState(
+        shot.at_us, Gaussian(shot.mean, shot.cov), heater, called, around, float(rest[0])
+    )
     heard = replace(state.heard, around=around, duty=duty)
     return replace(
         state,
@@ -245,7 +247,9 @@ def _look_ahead(monitor: Monitor, state: State, tick: Tick) -> Ahead:
     assert state.picture is not None
     quiet, where = monitor.quiet, monitor.where
     X = state_draws(state.picture, monitor.draws)
-    path = carry(quiet, state.picture, monitor.loops, loop_start(monitor, state), X, monitor.forecast)
+    path = carry(
+        quiet, state.picture, monitor.loops, loop_start(monitor, state), X, monitor.forecast
+    )
     regions = {r: hottest_ahead(quiet, where, path, r) for r in where.regions}
     passing = {}
     for limit in monitor.peak_limits:
@@ -400,7 +404,7 @@ def _shot(
         return state, None
     assert state.picture is not None
     f = state.picture
-    drive = np.concatenate((f.heater_W, f.called_W, state.heard.duty, f.around))
+    drive = np.concatenate((f.heater_W, f.called_W, state.heard.duty, f.around, [f.misfit]))
     basis = monitor.quiet.reduced.basis_hash
     shot = FieldShot(tick.at_us, basis, f.belief.mean, f.belief.cov, drive)
     return replace(state, shot_us=tick.at_us), shot
