@@ -48,6 +48,13 @@ MANY: dict[str, type[Entry]] = {
     "alarm_limit": run_tables.AlarmLimitEntry,
     "channel": run_tables.ChannelEntry,
 }
+# What stands in for a needed value that is missing or unreadable, so that the rest of
+# its table is still checked; nothing is ever built from a draft with a mistake.
+STAND_INS: dict[type[Entry], dict[str, Any]] = {
+    plate_tables.PlateEntry: {"name": "plate", "thickness_mm": 1.0, "material": "mild-steel"},
+    plate_tables.ZoneEntry: {"name": "zone", "watts": 1.0},
+    SensorEntry: {"name": "sensor"},
+}
 SECTIONS = (*SINGLE, *MANY, "people")
 REQUIRED = ("plate", "surface", "zone", "sensor")
 
@@ -217,11 +224,11 @@ def _entry(kind: type[Entry], table: dict[str, Any]) -> tuple[Entry | None, list
         for detail in details
         if not (detail["type"] == "missing" and detail["loc"] in guessed)
     ]
-    repaired = table
+    repaired: Any = table
     for detail in details:
         repaired = _without(repaired, detail["loc"])
     try:
-        return kind.model_validate(repaired), mistakes
+        return kind.model_validate({**STAND_INS.get(kind, {}), **repaired}), mistakes
     except ValidationError:
         return None, mistakes
 

@@ -133,7 +133,7 @@ def _sizes(ground: Ground) -> Iterator[Mistake]:
             f"a rim of {margin:g} mm leaves nothing of the plate",
             f"give less than half the smaller side, {smaller / 2:g} mm",
         )
-    if plate.cell_mm is not None and plate.cell_mm > 0:
+    if plate.cell_mm is not None and 0 < plate.cell_mm < 1e5:
         yield from _cells(ground, plate.cell_mm)
 
 

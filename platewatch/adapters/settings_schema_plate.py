@@ -28,6 +28,7 @@ _SHAPE_KEYS = {
     "polygon": ("points_mm",),
 }
 _PLACE_KEYS = ("x_mm", "y_mm")
+_FAR_MM = 1e5
 
 
 def _pairs(value: Any, what: str, least: int) -> Points:
@@ -48,7 +49,7 @@ def _ambient(value: Any) -> float | str:
 
 
 Property = Annotated[float | Points, PlainValidator(_property)]
-Place = Annotated[float | None, Within(-1e5, 1e5, "give it in millimetres")]
+Place = Annotated[float | None, Within(-_FAR_MM, _FAR_MM, "give it in millimetres")]
 Size = Annotated[float | None, Within(0, 2e4, "give a positive length in millimetres", above=True)]
 AmbientValue = Annotated[float | str, PlainValidator(_ambient), SurroundChannel()]
 AmbientOption = Annotated[float | str | None, PlainValidator(_ambient), SurroundChannel()]
@@ -79,7 +80,13 @@ class ShapeEntry(Entry):
         needed = _SHAPE_KEYS.get(self.shape, ("shape",))
         sizes = [getattr(self, key) for key in needed if key != "points_mm"]
         known = all(getattr(self, key) is not None for key in needed)
-        return self.shape in _SHAPE_KEYS and known and all(size > 0 for size in sizes)
+        if self.shape not in _SHAPE_KEYS or not known:
+            return False
+        corners = [value for corner in self.points_mm or () for value in corner]
+        places = (self.x_mm or 0.0, self.y_mm or 0.0, *corners)
+        return all(0 < size < _FAR_MM for size in sizes) and all(
+            abs(place) < _FAR_MM for place in places
+        )
 
     def mistakes(self) -> Iterator[Mistake]:
         if self.shape not in _SHAPE_KEYS:
@@ -95,6 +102,10 @@ class ShapeEntry(Entry):
             )
         for number, corner in enumerate(self.points_mm or ()):
             before = (self.points_mm or ())[number - 1]
+            if max(abs(corner[0]), abs(corner[1])) >= _FAR_MM:
+                yield Mistake(
+                    ("points_mm", number), f"corner {number + 1} is far away", "give millimetres"
+                )
             if corner == before:
                 yield Mistake(
                     ("points_mm", number),
@@ -271,7 +282,7 @@ class InsetEntry(Entry):
 class LoopEntry(Entry):
     sensor: str
     gain: Annotated[
-        float, Within(0, 100, "give the gain as duty (0..1) per kelvin, above 0", above=True)
+        float, Within(0, 10, "give the gain as duty (0..1) per kelvin, above 0", above=True)
     ]
     integral_s: Annotated[
         float | None, Within(0, 1e6, "give the integral time in s, or leave it out", above=True)

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 from settings_example import EXAMPLE
 
 from platewatch.adapters.settings import load
@@ -251,6 +254,25 @@ def test_a_wrong_key_does_not_hide_a_wrong_place_in_the_same_table(tmp_path: Pat
     assert [s.split(": ")[1] for s in found] == ["sensor[4].x_mm", "sensor[4].lagg_s"]
 
 
+@pytest.mark.parametrize(
+    ("right", "wrong", "key"),
+    [
+        ("thickness_mm = 12\n", "thicknes_mm = 12\n", "plate.thicknes_mm"),
+        ("thickness_mm = 12\n", "", "plate.thickness_mm"),
+        ('material = "own-iron"', "material = 3", "plate.material"),
+        ("watts = 650.0", 'watts = "650"', "zone[1].watts"),
+    ],
+)
+def test_an_unreadable_needed_value_does_not_hide_what_depends_on_the_rest(
+    tmp_path: Path, right: str, wrong: str, key: str
+) -> None:
+    """The outline still judges the sensors and the loops still name theirs."""
+    text = EXAMPLE.replace(right, wrong).replace(S4, S4.replace("60", "812", 1))
+    text = text.replace('sensor = "S1", gain', 'sensor = "S9", gain')
+    found = {s.split(": ")[1] for s in sentences(tmp_path / "p.toml", text)}
+    assert found == {key, "zone[1].loop.sensor", "sensor[4].x_mm"}
+
+
 def test_a_control_sensor_with_exchanged_coordinates_is_found_inside_the_plate(
     tmp_path: Path,
 ) -> None:
@@ -307,3 +329,34 @@ def test_a_whole_table_missing_is_one_sentence(tmp_path: Path) -> None:
     """An empty file says what a description needs, without a traceback."""
     found = sentences(tmp_path / "p.toml", "")
     assert [s.split(": ", 2)[1] for s in found] == ["plate", "sensor", "surface", "zone"]
+
+
+RUBBISH = (
+    *('""', '"x"', "-1", "0", "1e300", "nan", "true", "2026-01-01"),
+    *("[]", "{}", "[1, 2]", "{ a = 1 }", '["a"]', "[{}]", "[[1, 2], [3, 4]]"),
+    *('{ shape = "polygon", points_mm = [[1e300, 0], [0, 1e300], [1, 1]] }',),
+)
+
+
+@given(
+    edits=st.lists(
+        st.tuples(st.integers(0, EXAMPLE.count("\n") - 1), st.sampled_from((None, *RUBBISH))),
+        min_size=1,
+        max_size=4,
+    )
+)
+def test_rubbish_in_any_line_never_ends_in_a_traceback(
+    tmp_path_factory: pytest.TempPathFactory, edits: list[tuple[int, str | None]]
+) -> None:
+    """Whatever a line is replaced by: either it is valid, or it is named with its line."""
+    lines: list[str] = EXAMPLE.splitlines()
+    for number, rubbish in edits:
+        key = re.match(r"([\w\"-]+ = ).", lines[number])
+        lines[number] = f"{key.group(1)}{rubbish}" if rubbish and key else ""
+    path = tmp_path_factory.mktemp("rubbish") / "plate.toml"
+    path.write_text("\n".join(lines))
+    try:
+        load(path)
+    except SettingsError as error:
+        for sentence in str(error).splitlines():
+            assert re.fullmatch(rf"{re.escape(str(path))}:\d+: .+; .+", sentence)
