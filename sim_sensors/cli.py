@@ -141,7 +141,7 @@ def _batch(arguments: argparse.Namespace, description: Description) -> Batch:
 
 def _start(text: str | None) -> int:
     if text is None:
-        return time.time_ns() // 1000
+        return time.time_ns() // 1_000_000_000 * 1_000_000  # whole seconds read better
     try:
         return from_iso(text)
     except ValueError as error:

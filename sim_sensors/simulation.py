@@ -282,7 +282,9 @@ class Simulation:
         values: dict[str, float] = {}
         for sensor in self.plant.plate.sensors:
             shown = self._shown[sensor.name]
-            values[f"sensor/{sensor.name}"] = as_signal(sensor, shown)
+            values[f"sensor/{sensor.name}"] = as_signal(
+                sensor, shown, self._cold_junction(sensor.name)
+            )
         for zone, loop in zip(self.plant.plate.zones, self._loops, strict=True):
             set_point = from_degC(self._programme.set_point_degC, unit)
             values[f"zone/{zone.name}/duty"] = round(loop.duty * zone.duty_full, 6)
