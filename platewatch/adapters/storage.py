@@ -8,7 +8,7 @@ import shutil
 import sqlite3
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import AbstractContextManager, contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from types import TracebackType
 from typing import Self
@@ -26,6 +26,13 @@ from platewatch.adapters.storage_file import (
     storage_errors,
 )
 from platewatch.adapters.storage_read import AlarmRow, AppliedAction, Note, Record, Run
+from platewatch.adapters.storage_seal import (
+    check_seals,
+    due_days,
+    kept_since,
+    seal_note,
+    sealed_days,
+)
 from platewatch.adapters.storage_tables import CHAINS, clock_note, description, person_action, run
 from platewatch.adapters.storage_tidy import Tidied, tidy_record
 from platewatch.adapters.storage_write import (
@@ -206,7 +213,23 @@ class Store(Record):
     def verify(self, anchors: Sequence[ChainHead] = ()) -> Verification:
         """Check file, chains and descriptions; anchors: heads noted down earlier."""
         with storage_errors(self._path), self._engine.begin() as connection:
-            return verify_record(connection, anchors)
+            found = verify_record(connection, anchors)
+            seals, kept = sealed_days(connection), kept_since(connection)
+        broken = tuple(check_seals(self, seals, kept))
+        return replace(found, findings=found.findings + broken)
+
+    def seal_days(self, plate: str, now_us: int) -> int:
+        """Put the digests of finished days into the log book; the number of days sealed.
+
+        Reads a day's rows in short transactions (about 2 s for a million); safe to call from
+        another thread than the writer's.
+        """
+        with storage_errors(self._path), self._engine.begin() as connection:
+            sealed = sealed_days(connection)
+        days = due_days(self, plate, now_us, sealed)
+        for day in days:
+            self.note(plate, now_us, "", seal_note(self, plate, day))
+        return len(days)
 
     def tidy(self, now_us: int, reading_days: float = 90, keep_days: float = 400) -> Tidied:
         """Remove what is past its keeping time and give the room back to the disk."""

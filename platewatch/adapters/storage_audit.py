@@ -6,6 +6,7 @@ import hashlib
 import json
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 from sqlalchemy import Connection, Table, select
 
@@ -16,7 +17,7 @@ from platewatch.adapters.storage_chain import (
     check_anchor,
     check_chain,
 )
-from platewatch.adapters.storage_tables import CHAINS, alarm_event, description, log_note
+from platewatch.adapters.storage_tables import CHAINS, description, log_note
 
 CAUTION = (
     "A chain whose tail was cut, or that was rewritten as a whole, cannot be told from an "
@@ -52,9 +53,9 @@ def verify_record(connection: Connection, anchors: Sequence[ChainHead]) -> Verif
     return Verification(tuple(findings), heads)
 
 
-def removal_note(head: ChainHead) -> str:
-    """Text of the log-book line that says where a chain begins after retention."""
-    return REMOVED + json.dumps({"table": head.table, "to_seq": head.seq, "hash": head.hash})
+def removal_note(table: Table, **what: object) -> str:
+    """Text of the log-book line that says what retention took from a table."""
+    return REMOVED + json.dumps({"table": table.name, **what})
 
 
 def chain_start(connection: Connection, table: Table) -> ChainHead:
@@ -63,22 +64,35 @@ def chain_start(connection: Connection, table: Table) -> ChainHead:
     Only alarm events are ever removed, and only from the beginning; actions and the log book
     stay for good, so this note is itself under a chain.
     """
-    start = ChainHead(table.name, 0, GENESIS)
-    if table is not alarm_event:
-        return start
-    written = log_note.c.text.startswith(REMOVED, autoescape=True) & (log_note.c.person == "")
+    for found in reversed(marked_lines(connection, REMOVED)):
+        seq = found.get("to_seq")
+        if found.get("table") == table.name and isinstance(seq, int):
+            return ChainHead(table.name, seq, str(found.get("hash")))
+    return ChainHead(table.name, 0, GENESIS)
+
+
+def removed_before(connection: Connection, table: Table) -> int:
+    """Rows stamped earlier than this may be missing by retention; 0 if it never ran."""
+    lines = marked_lines(connection, REMOVED)
+    times = [line.get("before_us") for line in lines if line.get("table") == table.name]
+    return max((time for time in times if isinstance(time, int)), default=0)
+
+
+def marked_lines(connection: Connection, mark: str) -> list[dict[str, Any]]:
+    """Log-book lines of the program that begin with this mark, decoded, in their order."""
+    written = log_note.c.text.startswith(mark, autoescape=True) & (log_note.c.person == "")
     query = select(log_note.c.text).where(written).order_by(log_note.c.seq)
-    heads = [_removed(text) for text in connection.execute(query).scalars()]
-    return next((h for h in reversed(heads) if h and h.table == table.name), start)
+    lines = [_decoded(text, mark) for text in connection.execute(query).scalars()]
+    return [line for line in lines if line is not None]
 
 
-def _removed(text: object) -> ChainHead | None:
-    """The head in a removal note; None if the line was tampered with, which its chain shows."""
+def _decoded(text: object, mark: str) -> dict[str, Any] | None:
+    """None if the line was tampered with, which its chain shows."""
     try:
-        found = json.loads(str(text).removeprefix(REMOVED))
-        return ChainHead(str(found["table"]), int(found["to_seq"]), str(found["hash"]))
-    except (ValueError, KeyError, TypeError):
+        found = json.loads(str(text).removeprefix(mark))
+    except ValueError:
         return None
+    return found if isinstance(found, dict) else None
 
 
 def _file_findings(connection: Connection) -> Iterator[str]:

@@ -45,15 +45,16 @@ def tidy_record(writer: Engine, now_us: int, reading_days: float, keep_days: flo
     """
     short = now_us - round(reading_days * _DAY_US)
     long = now_us - round(keep_days * _DAY_US)
-    rows = {table.name: _remove(writer, table, short) for table in _SHORT}
-    rows |= {table.name: _remove(writer, table, long) for table in _LONG}
+    limits = {**dict.fromkeys(_SHORT, short), **dict.fromkeys(_LONG, long)}
+    rows = {}
+    for table, before_us in limits.items():
+        rows[table.name] = _remove(writer, table, before_us)
+        if rows[table.name]:
+            note = removal_note(table, before_us=before_us, rows=rows[table.name])
+            with writer.begin() as connection:
+                write_note(connection, "", now_us, "", note)
     rows["alarm_event"] = _remove_alarms(writer, long, now_us)
-    rows = {name: count for name, count in rows.items() if count}
-    if rows:
-        told = ", ".join(f"{count} of {name}" for name, count in rows.items())
-        with writer.begin() as connection:
-            write_note(connection, "", now_us, "", f"retention removed rows: {told}")
-    return Tidied(rows, _give_back(writer))
+    return Tidied({name: count for name, count in rows.items() if count}, _give_back(writer))
 
 
 def _remove(writer: Engine, table: Table, before_us: int) -> int:
@@ -93,7 +94,8 @@ def _remove_alarms(writer: Engine, before_us: int, now_us: int) -> int:
         last = _last_removable(connection, before_us)
         if last is None:
             return 0
-        write_note(connection, "", now_us, "", removal_note(last))
+        note = removal_note(alarm_event, to_seq=last.seq, hash=last.hash)
+        write_note(connection, "", now_us, "", note)
         return connection.execute(delete(alarm_event).where(alarm_event.c.seq <= last.seq)).rowcount
 
 
