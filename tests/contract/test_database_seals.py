@@ -22,7 +22,7 @@ def store():
     with Store.open("sqlite://") as opened:
         opened.start_run("table", 100 * DAY, "0.1", "ab")
         for at in range(100 * DAY, 102 * DAY + 2 * HOUR, HOUR):
-            readings = [Reading(at, f"sensor/T{k}", at / 7 + k, at + 1) for k in range(3)]
+            readings = [Reading(at, f"sensor/T{k}", 20.0 + k / 7, at + 1) for k in range(3)]
             opened.write("table", [Outcome(at, peak=replace(PEAK, at_us=at))], readings, {})
         yield opened
 
@@ -76,6 +76,7 @@ def test_a_late_reading_does_not_break_a_seal(store: Store):
             "73 rows now, 72 then",
         ),
     ],
+    ids=["a reading changed", "a reading removed", "a peak changed", "a reading added"],
 )
 def test_a_changed_removed_or_added_raw_row_is_found(store: Store, sql: str, finding: str):
     store.seal_days("table", 102 * DAY + 2 * HOUR)
