@@ -17,6 +17,7 @@ import msgspec
 from platewatch import units
 
 EARLIEST_US = 946_684_800_000_000  # 2000-01-01: an older stamp has the wrong unit
+LATEST_US = 4_102_444_800_000_000  # 2100-01-01, likewise
 SENML_ABSOLUTE_S = 2**28  # RFC 8428 section 4.5.3: below it a time is relative to now
 SENML_VERSION = 10
 
@@ -144,12 +145,14 @@ def time_us(value: Any, unit: str) -> int:
             raise Unreadable(Reason.BAD_TIME, str(error)) from None
     elif type(value) is int:
         at_us = value * _SCALE[unit]
-    elif type(value) is float:
+    elif type(value) is float and abs(value) < LATEST_US:
         at_us = round(value * _SCALE[unit])
     else:
         raise Unreadable(Reason.BAD_TIME, f"{_short(value)} is no time in {unit}")
-    if at_us < EARLIEST_US:
-        raise Unreadable(Reason.BAD_TIME, f"{_short(value)} is before the year 2000; in {unit}?")
+    if not EARLIEST_US <= at_us <= LATEST_US:
+        raise Unreadable(
+            Reason.BAD_TIME, f"{_short(value)} is not between 2000 and 2100; is it in {unit}?"
+        )
     return at_us
 
 
@@ -264,7 +267,7 @@ def _sample(name: str, base: _Record, record: _Record, v: float, seen_us: int) -
     elif seconds > 0:
         raise Unreadable(Reason.FUTURE, f"record {name!r} is {seconds:g} s ahead")
     elif seconds < 0:
-        at_us = seen_us + round(seconds * 1e6)
+        at_us = time_us(seen_us + round(max(seconds, -1e12) * 1e6), "us")
     value = (base.bv or 0.0) + v
     unit = record.u if record.u is not None else base.bu or ""
     return Sample(name, value, at_us, unit)

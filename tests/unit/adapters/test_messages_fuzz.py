@@ -50,6 +50,7 @@ leaves = st.one_of(
     st.integers(NOW // 1000 - 10, NOW // 1000 + 10),
     st.floats(),
     st.text(max_size=8),
+    st.sampled_from([1e308, -1e308, 1.5e12, -1e15, 10**400, -(10**30)]),
     st.sampled_from(["2026-03-01T07:00:00Z", "9999-12-31T23:59:59-23:59", "load-on", "Cel", "K"]),
 )
 trees = st.recursive(
@@ -57,6 +58,9 @@ trees = st.recursive(
     lambda inner: st.lists(inner, max_size=4) | st.dictionaries(names, inner, max_size=6),
     max_leaves=12,
 )
+
+
+extremes = st.sampled_from([0, -1, 2**28, 10**400, -(10**400), 1e308, -1e308, 1e12, -1e12, 9e15])
 
 
 def check(found: Decoded) -> None:
@@ -88,6 +92,20 @@ def test_any_bytes_are_a_value_or_a_refusal(
 def test_any_json_is_a_value_or_a_refusal(topic: str, tree: object) -> None:
     """Also what is valid JSON, with our own key names in the wrong places."""
     check(ROUTES.decode(topic, json.dumps(tree).encode(), NOW))
+
+
+@given(extremes, extremes, extremes)
+def test_no_stamp_or_value_is_too_extreme_to_be_refused(a: float, b: float, c: float) -> None:
+    """Stamps and numbers at the ends of what JSON can write."""
+    for topic, body in (
+        ("x/json", {"ts": a, "data": [{"v": b}]}),
+        ("x/flat", {"at_us": a, "surround/a": b, "zone/Z1/duty": c}),
+        ("x/flat", {"at_ms": a, "batch": {"event": "end", "mass_kg": b}}),
+        ("x/senml", [{"bt": a, "t": b, "n": "surround/a", "v": c, "bv": b}]),
+        ("x/senml", [{"t": a, "n": "sensor/T2", "u": "Cel", "v": c}]),
+        ("plates/p/surround/a", b),
+    ):
+        check(ROUTES.decode(topic, json.dumps(body).encode(), NOW))
 
 
 @given(st.floats(-273.15, 3000.0), st.integers(NOW - 10**12, NOW))
