@@ -77,6 +77,7 @@ def _parser() -> argparse.ArgumentParser:
     add("--sensor", default="", help="sensor of the incident")
     add("--as-described", action="store_true", help="true plate without the stated model errors")
     add("--tell", action="store_true", help="say in plain lines what really happens")
+    add("--wait", type=_positive, default=10.0, metavar="S", help="for the broker (default 10)")
     add("--clock", metavar="US:MONOTONIC:SPEED", help="plate time shared with another process")
     return parser
 
@@ -206,7 +207,7 @@ def _send(
     stop = threading.Event()
     signal.signal(signal.SIGTERM, lambda number, frame: stop.set())
     signal.signal(signal.SIGINT, lambda number, frame: stop.set())
-    gateway = Gateway(host, port, f"sim-sensors-{os.getpid()}").open()
+    gateway = Gateway(host, port, f"sim-sensors-{os.getpid()}").open(arguments.wait)
     while simulation.at_s < arguments.begin_s - 1e-9 and not stop.is_set():
         simulation.step()
     pace = _pace(arguments, start_us)

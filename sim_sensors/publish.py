@@ -51,10 +51,12 @@ class Gateway:
         self.host, self.port = host, port
         self._connected = threading.Event()
         self._refused = ""
+        self._sent = self._acknowledged = 0
         self._client = Client(CallbackAPIVersion.VERSION2, client_id=client_id)
         self._client.max_queued_messages_set(QUEUED_AT_MOST)
         self._client.on_connect = self._on_connect
         self._client.on_disconnect = self._on_disconnect
+        self._client.on_publish = self._on_publish
 
     def open(self, wait_s: float = 10.0) -> Gateway:
         """Connect.  Raises NoDataError where no broker answers within `wait_s`."""
@@ -71,6 +73,7 @@ class Gateway:
 
     def send(self, topic: str, payload: str) -> None:
         """At least once; without a connection it waits for the next one."""
+        self._sent += 1
         self._client.publish(topic, payload, qos=1)
 
     def close(self) -> int:
@@ -84,7 +87,7 @@ class Gateway:
         return left
 
     def _waiting(self) -> int:
-        return len(self._client._out_messages)
+        return self._sent - self._acknowledged
 
     def _on_connect(
         self,
@@ -108,6 +111,16 @@ class Gateway:
         properties: Properties | None,
     ) -> None:
         self._connected.clear()
+
+    def _on_publish(
+        self,
+        client: Client,
+        userdata: object,
+        mid: int,
+        reason: ReasonCode,
+        properties: Properties,
+    ) -> None:
+        self._acknowledged += 1
 
 
 def publish(
