@@ -97,7 +97,7 @@ class Bus:
         self.received = self.dropped = 0
         self._topics, self._sink, self._clock = tuple(topics), sink, clock
         self._publish, self._root = publish, f"platewatch/{plate}/"
-        self._keepalive_s = keepalive_s
+        self._keepalive_s, self._encrypted = keepalive_s, bool(ca_file)
         self._generation = 0
         self._connected = False
         self._lock = threading.Lock()  # generation and acknowledgement go together
@@ -252,7 +252,8 @@ class Bus:
             self._tell("callback failed", f"on connecting: {error!r}")
 
     def _on_connect_fail(self, client: Client, userdata: Any) -> None:
-        self._trouble("no broker", f"{self.host}:{self.port} does not answer; trying again")
+        hint = " or its certificate does not fit ca_file and host" if self._encrypted else ""
+        self._trouble("no broker", f"{self.host}:{self.port} does not answer{hint}; trying again")
 
     def _on_disconnect(
         self,
