@@ -44,6 +44,7 @@ class PlateRun:
     """One run of one plate.  Everything but the bus callbacks happens in the caller's thread.
 
     plate: name;  store: opened and held alone by the caller
+    calm_s: how often one line says how things stand
     """
 
     def __init__(
@@ -53,10 +54,13 @@ class PlateRun:
         store: compose.Store,
         clock: Clock,
         log: logging.Logger,
+        calm_s: float = CALM_LINE_EVERY_S,
     ) -> None:
         self.plate = description.plate.name
+        self._calm_every_s = calm_s
         self.description = description
         self.latest: PeakRow | None = None
+        self.recent: list[Outcome] = []  # of the last round
         self._store, self._clock = store, clock
         self._log = logging.LoggerAdapter(log, {"plate": self.plate})
         self._routes = compose.build_routes(description)
@@ -101,7 +105,8 @@ class PlateRun:
         self._watch_bus(now_s)
         took = self._take_messages()
         self._poll_actions(now_s)
-        self._estimate(self.session.close(self._ticker_clock(now_s)))
+        self.recent = self.session.close(self._ticker_clock(now_s))
+        self._estimate(self.recent)
         full = self._sink.empty() and len(self._waiting.tokens) >= COMMIT_AT
         if full or now_s - self._committed_s >= COMMIT_EVERY_S:
             self._commit(now_s)
@@ -261,7 +266,7 @@ class PlateRun:
             self._log.warning("still no broker at %s:%d", self._bus.host, self._bus.port)
 
     def _calm_line(self, now_s: float) -> None:
-        if now_s - self._calm_s < CALM_LINE_EVERY_S:
+        if now_s - self._calm_s < self._calm_every_s:
             return
         self._calm_s = now_s
         if self.latest is not None and not self.session.blind:
@@ -276,6 +281,7 @@ def run_daemon(
     *,
     database: str = "",
     for_s: float | None = None,
+    calm_s: float = CALM_LINE_EVERY_S,
     each_turn: Callable[[PlateRun], None] | None = None,
 ) -> None:
     """Run until `stop` is set, or for so many seconds of the clock.
@@ -295,7 +301,7 @@ def run_daemon(
                 stores[url] = stack.enter_context(compose.open_store(url))
                 stack.enter_context(stores[url].hold_alone())
         runs = [
-            PlateRun(each, monitor, stores[database or each.store.url], clock, log)
+            PlateRun(each, monitor, stores[database or each.store.url], clock, log, calm_s)
             for each, monitor in zip(descriptions, monitors, strict=True)
         ]
         _turn_all(runs, clock, stop, for_s, each_turn)
