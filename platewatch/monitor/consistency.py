@@ -37,8 +37,8 @@ def gate(dof: int, confidence: float) -> float:
 def average_bounds(count: int, dof: int, confidence: float = CONFIDENCE) -> tuple[float, float]:
     """Two-sided bounds of the mean of `count` independent chi-squares of `dof` degrees."""
     tail = (1 - confidence) / 2
-    low, high = chi2.ppf([tail, 1 - tail], count * dof) / count
-    return float(low), float(high)
+    dofs = count * dof
+    return float(chi2.ppf(tail, dofs)) / count, float(chi2.ppf(1 - tail, dofs)) / count
 
 
 def nees(truth: Array, belief: Gaussian) -> float:

@@ -59,8 +59,8 @@ def test_the_level_of_the_nile_is_that_of_the_textbook(flow):
     assert variance == pytest.approx(known, rel=1e-8)
     residual = [found[i].residual[0] for i in range(3)]
     assert residual == pytest.approx([40, -177.9278399348, 137.2014704726], rel=1e-8)
-    F = [found[i].S[0, 0] for i in range(3)]
-    assert F == pytest.approx([31667.1, 24467.8363793969, 22349.5699387], rel=1e-8)
+    expected_variance = [found[i].S[0, 0] for i in range(3)]
+    assert expected_variance == pytest.approx([31667.1, 24467.8363793969, 22349.5699387], rel=1e-8)
 
 
 def test_the_nile_from_a_known_start_has_its_likelihood(flow):
