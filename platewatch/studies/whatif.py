@@ -35,7 +35,7 @@ CAUTION = (
 COLDEST_DEGC, HOTTEST_DEGC = -250.0, 3000.0  # beyond these no plate is looked for
 MOST_NEWTON = 40
 SETTLED_K = 1e-8
-STEP_TOLERANCE_K = 5e-3
+STEP_TOLERANCE_K = 1e-3
 
 
 @dataclass(frozen=True)
