@@ -4,8 +4,11 @@ from __future__ import annotations
 
 import hashlib
 import queue
-from dataclasses import replace
+import tempfile
+from dataclasses import dataclass, replace
 from pathlib import Path
+
+import numpy as np
 
 from platewatch.adapters.broker import EmbeddedBroker
 from platewatch.adapters.bus import Arrival, Bus, BusEvent, Token
@@ -20,10 +23,10 @@ from platewatch.adapters.messages_send import (
     topic_of,
 )
 from platewatch.adapters.settings import Description, load
-from platewatch.adapters.storage import DatabaseBusyError, DiskFullError, Run, Store
+from platewatch.adapters.storage import AlarmRow, Run, Store
 from platewatch.adapters.tables_out import write_table
 from platewatch.clock import Clock
-from platewatch.errors import SettingsError
+from platewatch.errors import NoDataError, SettingsError
 from platewatch.monitor.estimator import build_quiet
 from platewatch.monitor.loops import build_loops
 from platewatch.monitor.peak import places, standard_draws
@@ -32,17 +35,18 @@ from platewatch.session import Session
 from platewatch.thermal.conduction import build_model
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import reduce
-from platewatch.units import TemperatureUnit
+from platewatch.types import Array
+from platewatch.units import TemperatureUnit, iso
 
 __all__ = [
+    "AlarmRow",
     "Arrival",
     "Bus",
     "BusEvent",
-    "DatabaseBusyError",
     "Decoded",
     "Description",
-    "DiskFullError",
     "EmbeddedBroker",
+    "Field",
     "LogReader",
     "LogReport",
     "Monitor",
@@ -59,6 +63,7 @@ __all__ = [
     "build_monitor",
     "build_routes",
     "describe",
+    "field_at",
     "load_columns",
     "open_store",
     "peak_message",
@@ -185,3 +190,67 @@ def with_limits(description: Description, other: Description) -> Description:
         )
     both = hashlib.sha256((description.sha256 + other.sha256).encode())
     return replace(description, alarm_limits=other.alarm_limits, sha256=both.hexdigest())
+
+
+@dataclass(frozen=True)
+class Field:
+    """The inferred field of one tick: (n,) each, one entry a cell."""
+
+    at_us: int
+    x_mm: Array
+    y_mm: Array
+    degC: Array
+    sd_K: Array
+
+
+def field_at(store: Store, plate: str, at_us: int, description: Path | None = None) -> Field:
+    """The field at the last tick up to a moment, from the last stored state before it.
+
+    description: else the one that the record keeps for that state.  Raises NoDataError
+    for a moment outside the record, SettingsError where the description does not fit it.
+    """
+    shot = store.shot_before(plate, at_us)
+    ends_us = max((run.last_tick_us or 0 for run in store.runs(plate)), default=0)
+    if shot is None:
+        raise NoDataError(f"no field of plate {plate!r} is known at {iso(at_us)} or before")
+    if at_us > ends_us:
+        raise NoDataError(f"{iso(at_us)} is after the last tick on record, {iso(ends_us)}")
+    monitor = build_monitor(_described(store, shot.basis, description))
+    if monitor.quiet.reduced.basis_hash != shot.basis:
+        raise SettingsError(
+            "the description does not fit the stored field; give the one it was recorded with "
+            "as --description PLATE.toml, and use the platewatch that recorded it"
+        )
+    session = Session(monitor, closed_us=shot.at_us, shot=shot)
+    for reading in store.read_readings(plate, shot.at_us + 1, at_us + 1):
+        session.take(reading)
+    tick_us = monitor.estimator.tick_us
+    session.finish(at_us // tick_us * tick_us)
+    picture = session.state.picture
+    assert picture is not None, "a stored state is a picture"
+    V, modes = monitor.quiet.reduced.V, monitor.quiet.blocks.a
+    cov = picture.belief.cov[modes, modes]
+    grid = monitor.quiet.grid
+    return Field(
+        at_us=picture.at_us,
+        x_mm=grid.x * 1e3,
+        y_mm=grid.y * 1e3,
+        degC=V @ picture.belief.mean[modes],
+        sd_K=np.sqrt(np.einsum("ij,ij->i", V @ cov, V)),
+    )
+
+
+def _described(store: Store, basis: str, given: Path | None) -> Description:
+    """The description given, else the one stored beside the basis."""
+    if given is not None:
+        return load(given)
+    sha256 = store.description_of_basis(basis)
+    content = store.description_of(sha256) if sha256 else None
+    if content is None:
+        raise SettingsError(
+            "the record does not keep its plate description; give it: --description PLATE.toml"
+        )
+    with tempfile.NamedTemporaryFile(suffix=".toml") as file:
+        file.write(content)
+        file.flush()
+        return load(Path(file.name))
