@@ -176,7 +176,13 @@ def _whatif(commands: Commands) -> None:
     parser.add_argument(
         "--power", metavar="ZONE=W", action="append", default=[], help="watts of a zone"
     )
-    parser.add_argument("--ambient", type=float, metavar="T", help="of every surround channel")
+    parser.add_argument(
+        "--ambient",
+        metavar="T",
+        action="append",
+        default=[],
+        help="of every surround channel, or NAME=T",
+    )
     when = parser.add_mutually_exclusive_group()
     when.add_argument("--after", type=float, metavar="SECONDS", help="from a plate at ambient")
     when.add_argument("--steady", action="store_true", help="the final field (the default)")

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import queue
 import tempfile
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -32,7 +33,10 @@ from platewatch.monitor.loops import build_loops
 from platewatch.monitor.peak import places, standard_draws
 from platewatch.monitor.pipeline import Monitor
 from platewatch.session import Session
-from platewatch.thermal.conduction import build_model
+from platewatch.studies.facts import Facts, derive
+from platewatch.studies.picture import svg_picture
+from platewatch.studies.whatif import WhatIf, whatif_steady, whatif_transient
+from platewatch.thermal.conduction import NOMINAL_AMBIENT_DEGC, build_model
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import reduce
 from platewatch.types import Array
@@ -46,6 +50,7 @@ __all__ = [
     "Decoded",
     "Description",
     "EmbeddedBroker",
+    "Facts",
     "Field",
     "LogReader",
     "LogReport",
@@ -56,12 +61,14 @@ __all__ = [
     "Session",
     "Store",
     "Token",
+    "WhatIf",
     "alarm_message",
     "alarm_topic",
     "alive_message",
     "build_bus",
     "build_monitor",
     "build_routes",
+    "derive_facts",
     "describe",
     "field_at",
     "load_columns",
@@ -69,7 +76,10 @@ __all__ = [
     "peak_message",
     "read_log",
     "resume_session",
+    "svg_picture",
+    "thermal_channels",
     "topic_of",
+    "what_if",
     "with_broker",
     "with_limits",
     "write_table",
@@ -127,6 +137,13 @@ def build_routes(description: Description) -> Routes:
 
 def surround_channels(description: Description) -> tuple[str, ...]:
     """Bus channels that the plate's surfaces, edges, clamps and cold junctions name."""
+    junctions = [s.cold_junction for s in description.plate.sensors]
+    named = [*thermal_channels(description), *(j for j in junctions if isinstance(j, str))]
+    return tuple(dict.fromkeys(named))
+
+
+def thermal_channels(description: Description) -> tuple[str, ...]:
+    """Those whose temperature the plate feels."""
     plate = description.plate
     named: list[object] = []
     for surface in (plate.top, plate.bottom):
@@ -134,7 +151,6 @@ def surround_channels(description: Description) -> tuple[str, ...]:
     for edge in plate.edges:
         named += [edge.ambient, edge.held]
     named += [clamp.ambient for clamp in plate.clamps]
-    named += [sensor.cold_junction for sensor in plate.sensors]
     return tuple(dict.fromkeys(name for name in named if isinstance(name, str)))
 
 
@@ -254,3 +270,28 @@ def _described(store: Store, basis: str, given: Path | None) -> Description:
         file.write(content)
         file.flush()
         return load(Path(file.name))
+
+
+def derive_facts(description: Description) -> Facts:
+    """What follows from a description, for `check`."""
+    return derive(build_monitor(description).quiet, reference_degC(description))
+
+
+def what_if(
+    description: Description,
+    powers: Mapping[str, float],
+    surround: Mapping[str, float],
+    loads: Sequence[str],
+    after_s: float | None,
+) -> WhatIf:
+    """A calculated field: steady, or some time after a start at ambient.
+
+    powers: W by zone;  surround: degC by channel, those not named count as 22 degC
+    """
+    plate = description.plate
+    if after_s is None:
+        return whatif_steady(plate, powers, surround, loads)
+    start_degC = next(iter(surround.values()), NOMINAL_AMBIENT_DEGC)
+    return whatif_transient(
+        plate, powers, surround, loads, after_s=after_s, initial_degC=start_degC
+    )
