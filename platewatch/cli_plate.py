@@ -8,7 +8,7 @@ from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
-from platewatch import compose
+from platewatch import compose_plate as compose
 from platewatch.cli_parser import WHATIF_CAUTION
 from platewatch.errors import SettingsError, StorageError
 from platewatch.units import TemperatureUnit, from_degC, to_degC

@@ -2,11 +2,9 @@
 
 from __future__ import annotations
 
-import hashlib
 import queue
 import tempfile
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -23,24 +21,22 @@ from platewatch.adapters.messages_send import (
     peak_message,
     topic_of,
 )
-from platewatch.adapters.settings import Description, load
 from platewatch.adapters.storage import AlarmRow, Run, Store
 from platewatch.adapters.tables_out import write_table
 from platewatch.clock import Clock
+from platewatch.compose_plate import (
+    Description,
+    Monitor,
+    build_monitor,
+    describe,
+    surround_channels,
+    with_broker,
+    with_limits,
+)
 from platewatch.errors import NoDataError, SettingsError
-from platewatch.monitor.estimator import build_quiet
-from platewatch.monitor.loops import build_loops
-from platewatch.monitor.peak import places, standard_draws
-from platewatch.monitor.pipeline import Monitor
 from platewatch.session import Session
-from platewatch.studies.facts import Facts, derive
-from platewatch.studies.picture import svg_picture
-from platewatch.studies.whatif import WhatIf, whatif_steady, whatif_transient
-from platewatch.thermal.conduction import NOMINAL_AMBIENT_DEGC, build_model
-from platewatch.thermal.grid import build_grid
-from platewatch.thermal.reduction import reduce
 from platewatch.types import Array
-from platewatch.units import TemperatureUnit, iso
+from platewatch.units import iso
 
 __all__ = [
     "AlarmRow",
@@ -50,7 +46,6 @@ __all__ = [
     "Decoded",
     "Description",
     "EmbeddedBroker",
-    "Facts",
     "Field",
     "LogReader",
     "LogReport",
@@ -61,14 +56,12 @@ __all__ = [
     "Session",
     "Store",
     "Token",
-    "WhatIf",
     "alarm_message",
     "alarm_topic",
     "alive_message",
     "build_bus",
     "build_monitor",
     "build_routes",
-    "derive_facts",
     "describe",
     "field_at",
     "load_columns",
@@ -76,50 +69,14 @@ __all__ = [
     "peak_message",
     "read_log",
     "resume_session",
-    "svg_picture",
-    "thermal_channels",
     "topic_of",
-    "what_if",
     "with_broker",
     "with_limits",
     "write_table",
     "write_wide_log",
 ]
 
-REFERENCE_DEGC = 100.0  # where losses are linearised when no recipe names a set-point
 LONGEST_QUEUE = 20_000  # messages between the network and the estimator
-
-
-def describe(path: Path) -> Description:
-    """Read and check one plate description."""
-    return load(path)
-
-
-def reference_degC(description: Description) -> float:
-    """Where the losses of a plate are linearised."""
-    reference = description.plate.reference_degC
-    return REFERENCE_DEGC if reference is None else reference
-
-
-def build_monitor(description: Description) -> Monitor:
-    """The estimator, forecast and alarms of one plate."""
-    plate = description.plate
-    reference = reference_degC(description)
-    reduced = reduce(build_model(plate, build_grid(plate), reference))
-    quiet = build_quiet(plate, reduced, reference)
-    limits = description.alarm_limits
-    zones = tuple({limit.zone for limit in limits if limit.zone})
-    return Monitor(
-        quiet=quiet,
-        loops=build_loops(plate),
-        where=places(quiet, tuple(sorted(zones))),
-        draws=standard_draws(quiet.blocks.size),
-        limits=limits,
-        recipes=description.recipes,
-        estimator=description.estimator,
-        forecast=description.forecast,
-        unit=TemperatureUnit(description.unit),
-    )
 
 
 def build_routes(description: Description) -> Routes:
@@ -133,36 +90,6 @@ def build_routes(description: Description) -> Routes:
         unit=str(description.unit),
         maps=description.channels,
     )
-
-
-def surround_channels(description: Description) -> tuple[str, ...]:
-    """Bus channels that the plate's surfaces, edges, clamps and cold junctions name."""
-    junctions = [s.cold_junction for s in description.plate.sensors]
-    named = [*thermal_channels(description), *(j for j in junctions if isinstance(j, str))]
-    return tuple(dict.fromkeys(named))
-
-
-def thermal_channels(description: Description) -> tuple[str, ...]:
-    """Those whose temperature the plate feels."""
-    plate = description.plate
-    named: list[object] = []
-    for surface in (plate.top, plate.bottom):
-        named += [surface.ambient, surface.surroundings]
-    for edge in plate.edges:
-        named += [edge.ambient, edge.held]
-    named += [clamp.ambient for clamp in plate.clamps]
-    return tuple(dict.fromkeys(name for name in named if isinstance(name, str)))
-
-
-def with_broker(description: Description, broker: str) -> Description:
-    """The description with another broker, HOST:PORT; raises SettingsError if it is none."""
-    host, separator, port = broker.rpartition(":")
-    if not separator:
-        host, port = broker, str(description.bus.port)
-    if not host or not port.isdecimal() or not 1 <= int(port) <= 65_535:
-        raise SettingsError(f"--broker {broker!r} is not HOST:PORT; write 127.0.0.1:1883")
-    bus = replace(description.bus, host=host.strip("[]"), port=int(port))
-    return replace(description, bus=bus)
 
 
 def build_bus(
@@ -196,16 +123,6 @@ def resume_session(monitor: Monitor, store: Store, plate: str, closed_us: int | 
     """A run that begins where the record ends."""
     alarms = {(event.alarm, event.subject): event.to_state for event in store.alarm_states(plate)}
     return Session(monitor, closed_us=closed_us, shot=store.last_shot(plate), alarms=alarms)
-
-
-def with_limits(description: Description, other: Description) -> Description:
-    """The description with the alarm limits of another one of the same plate."""
-    if other.plate.name != description.plate.name:
-        raise SettingsError(
-            f"{other.path}: describes plate {other.plate.name!r}, not {description.plate.name!r}"
-        )
-    both = hashlib.sha256((description.sha256 + other.sha256).encode())
-    return replace(description, alarm_limits=other.alarm_limits, sha256=both.hexdigest())
 
 
 @dataclass(frozen=True)
@@ -259,7 +176,7 @@ def field_at(store: Store, plate: str, at_us: int, description: Path | None = No
 def _described(store: Store, basis: str, given: Path | None) -> Description:
     """The description given, else the one stored beside the basis."""
     if given is not None:
-        return load(given)
+        return describe(given)
     sha256 = store.description_of_basis(basis)
     content = store.description_of(sha256) if sha256 else None
     if content is None:
@@ -269,29 +186,4 @@ def _described(store: Store, basis: str, given: Path | None) -> Description:
     with tempfile.NamedTemporaryFile(suffix=".toml") as file:
         file.write(content)
         file.flush()
-        return load(Path(file.name))
-
-
-def derive_facts(description: Description) -> Facts:
-    """What follows from a description, for `check`."""
-    return derive(build_monitor(description).quiet, reference_degC(description))
-
-
-def what_if(
-    description: Description,
-    powers: Mapping[str, float],
-    surround: Mapping[str, float],
-    loads: Sequence[str],
-    after_s: float | None,
-) -> WhatIf:
-    """A calculated field: steady, or some time after a start at ambient.
-
-    powers: W by zone;  surround: degC by channel, those not named count as 22 degC
-    """
-    plate = description.plate
-    if after_s is None:
-        return whatif_steady(plate, powers, surround, loads)
-    start_degC = next(iter(surround.values()), NOMINAL_AMBIENT_DEGC)
-    return whatif_transient(
-        plate, powers, surround, loads, after_s=after_s, initial_degC=start_degC
-    )
+        return describe(Path(file.name))

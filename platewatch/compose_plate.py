@@ -1,0 +1,138 @@
+"""What is built from a description alone: no bus, no record, so that it loads quickly."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
+from pathlib import Path
+
+from platewatch.adapters.settings import Description, load
+from platewatch.errors import SettingsError
+from platewatch.monitor.estimator import build_quiet
+from platewatch.monitor.loops import build_loops
+from platewatch.monitor.peak import places, standard_draws
+from platewatch.monitor.pipeline import Monitor
+from platewatch.studies.facts import Facts, derive
+from platewatch.studies.picture import svg_picture
+from platewatch.studies.whatif import WhatIf, whatif_steady, whatif_transient
+from platewatch.thermal.conduction import NOMINAL_AMBIENT_DEGC, build_model
+from platewatch.thermal.grid import build_grid
+from platewatch.thermal.reduction import reduce
+from platewatch.units import TemperatureUnit
+
+__all__ = [
+    "Description",
+    "Facts",
+    "Monitor",
+    "WhatIf",
+    "build_monitor",
+    "derive_facts",
+    "describe",
+    "reference_degC",
+    "surround_channels",
+    "svg_picture",
+    "thermal_channels",
+    "what_if",
+    "with_broker",
+    "with_limits",
+]
+
+REFERENCE_DEGC = 100.0  # where losses are linearised when no recipe names a set-point
+
+
+def describe(path: Path) -> Description:
+    """Read and check one plate description."""
+    return load(path)
+
+
+def reference_degC(description: Description) -> float:
+    """Where the losses of a plate are linearised."""
+    reference = description.plate.reference_degC
+    return REFERENCE_DEGC if reference is None else reference
+
+
+def build_monitor(description: Description) -> Monitor:
+    """The estimator, forecast and alarms of one plate."""
+    plate = description.plate
+    reference = reference_degC(description)
+    reduced = reduce(build_model(plate, build_grid(plate), reference))
+    quiet = build_quiet(plate, reduced, reference)
+    limits = description.alarm_limits
+    zones = tuple({limit.zone for limit in limits if limit.zone})
+    return Monitor(
+        quiet=quiet,
+        loops=build_loops(plate),
+        where=places(quiet, tuple(sorted(zones))),
+        draws=standard_draws(quiet.blocks.size),
+        limits=limits,
+        recipes=description.recipes,
+        estimator=description.estimator,
+        forecast=description.forecast,
+        unit=TemperatureUnit(description.unit),
+    )
+
+
+def surround_channels(description: Description) -> tuple[str, ...]:
+    """Bus channels that the plate's surfaces, edges, clamps and cold junctions name."""
+    junctions = [s.cold_junction for s in description.plate.sensors]
+    named = [*thermal_channels(description), *(j for j in junctions if isinstance(j, str))]
+    return tuple(dict.fromkeys(named))
+
+
+def thermal_channels(description: Description) -> tuple[str, ...]:
+    """Those whose temperature the plate feels."""
+    plate = description.plate
+    named: list[object] = []
+    for surface in (plate.top, plate.bottom):
+        named += [surface.ambient, surface.surroundings]
+    for edge in plate.edges:
+        named += [edge.ambient, edge.held]
+    named += [clamp.ambient for clamp in plate.clamps]
+    return tuple(dict.fromkeys(name for name in named if isinstance(name, str)))
+
+
+def with_broker(description: Description, broker: str) -> Description:
+    """The description with another broker, HOST:PORT; raises SettingsError if it is none."""
+    host, separator, port = broker.rpartition(":")
+    if not separator:
+        host, port = broker, str(description.bus.port)
+    if not host or not port.isdecimal() or not 1 <= int(port) <= 65_535:
+        raise SettingsError(f"--broker {broker!r} is not HOST:PORT; write 127.0.0.1:1883")
+    bus = replace(description.bus, host=host.strip("[]"), port=int(port))
+    return replace(description, bus=bus)
+
+
+def with_limits(description: Description, other: Description) -> Description:
+    """The description with the alarm limits of another one of the same plate."""
+    if other.plate.name != description.plate.name:
+        raise SettingsError(
+            f"{other.path}: describes plate {other.plate.name!r}, not {description.plate.name!r}"
+        )
+    both = hashlib.sha256((description.sha256 + other.sha256).encode())
+    return replace(description, alarm_limits=other.alarm_limits, sha256=both.hexdigest())
+
+
+def derive_facts(description: Description) -> Facts:
+    """What follows from a description, for `check`."""
+    return derive(build_monitor(description).quiet, reference_degC(description))
+
+
+def what_if(
+    description: Description,
+    powers: Mapping[str, float],
+    surround: Mapping[str, float],
+    loads: Sequence[str],
+    after_s: float | None,
+) -> WhatIf:
+    """A calculated field: steady, or some time after a start at ambient.
+
+    powers: W by zone;  surround: degC by channel, those not named count as 22 degC
+    """
+    plate = description.plate
+    if after_s is None:
+        return whatif_steady(plate, powers, surround, loads)
+    start_degC = next(iter(surround.values()), NOMINAL_AMBIENT_DEGC)
+    return whatif_transient(
+        plate, powers, surround, loads, after_s=after_s, initial_degC=start_degC
+    )
