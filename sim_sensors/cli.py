@@ -76,6 +76,7 @@ def _parser() -> argparse.ArgumentParser:
     add("--zone", default="", help="zone of the incident")
     add("--sensor", default="", help="sensor of the incident")
     add("--as-described", action="store_true", help="true plate without the stated model errors")
+    add("--anti-windup", choices=("clamp", "hold"), default="clamp", help="of the PI loops")
     add("--tell", action="store_true", help="say in plain lines what really happens")
     add("--wait", type=_positive, default=10.0, metavar="S", help="for the broker (default 10)")
     add("--clock", metavar="US:MONOTONIC:SPEED", help="plate time shared with another process")
@@ -101,6 +102,7 @@ def _seconds(text: str) -> float:
 
 def _run(arguments: argparse.Namespace) -> int:
     from platewatch.adapters.settings import load
+    from sim_sensors.control import AntiWindup
     from sim_sensors.simulation import Plant, Simulation
     from sim_sensors.truth import AS_DESCRIBED, STATED_ERROR
 
@@ -113,6 +115,7 @@ def _run(arguments: argparse.Namespace) -> int:
         seed=arguments.seed,
         sample_s=arguments.sample,
         model_error=AS_DESCRIBED if arguments.as_described else STATED_ERROR,
+        anti_windup=AntiWindup(arguments.anti_windup),
         batch_name=f"{description.plate.name}-{arguments.seed}",
     )
     if arguments.log:

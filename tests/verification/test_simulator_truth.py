@@ -262,11 +262,11 @@ def test_a_loose_control_sensor_overheats_the_plate_while_all_sensors_look_well(
     soaked: Simulation,
 ) -> None:
     """Same bounds, with the sensor's 90 s on top; another prototype had 256 s.  The hottest
-    reading stays below the limit by 5 K."""
+    reading stays below the limit by the class 2 tolerance of 2.5 K (IEC 60584-1)."""
     samples = _incident(soaked, "loose-sensor", 1000.0)
     soonest = _adiabatic_s(soaked, 135.0)
     assert soonest < _passes(samples, 135.0) < 2 * soonest + 120.0
-    assert max(s.truth.hottest_degC for s in samples) < 130.0
+    assert max(s.truth.hottest_degC for s in samples) < 132.5
     hottest = max(samples, key=lambda s: s.truth.peak_degC).truth
     assert (hottest.peak_x_m, hottest.peak_y_m) == pytest.approx((0.2, 0.6), abs=0.08)
 
@@ -274,11 +274,12 @@ def test_a_loose_control_sensor_overheats_the_plate_while_all_sensors_look_well(
 def test_a_cold_load_drives_the_peak_over_the_limit_unseen(soaked: Simulation) -> None:
     """The rim of the zone overheats while the mould soaks up the rest: later than a stuck
     zone (two thirds of the heater lie bare), sooner than the mould needs at full power for
-    all of its heat twice over; no sensor comes within 5 K of the limit."""
+    all of its heat twice over (another prototype had 748 s); no sensor comes within the
+    class 2 tolerance of the limit."""
     samples = _incident(soaked, "cold-load", 1400.0)
     whole_s = 14.7 * 490.0 * 100.0 / 1133.0
     assert _adiabatic_s(soaked, 135.0) < _passes(samples, 135.0) < 2 * whole_s
-    assert max(s.truth.hottest_degC for s in samples) < 130.0
+    assert max(s.truth.hottest_degC for s in samples) < 132.5
     hottest = max(samples, key=lambda s: s.truth.peak_degC).truth
     assert hottest.peak_y_m < 0.06  # at the aisle edge of Z2, beside the mould
     assert 0.4 < hottest.peak_x_m < 0.8
