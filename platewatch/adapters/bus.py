@@ -97,7 +97,7 @@ class Bus:
         self.received = self.dropped = 0
         self._topics, self._sink, self._clock = tuple(topics), sink, clock
         self._publish, self._root = publish, f"platewatch/{plate}/"
-        self._keepalive_s, self._encrypted = keepalive_s, bool(ca_file)
+        self._keepalive_s = keepalive_s
         self._generation = 0
         self._connected = False
         self._lock = threading.Lock()  # generation and acknowledgement go together
@@ -107,10 +107,10 @@ class Bus:
         self._connected_at = self._last_message = self._last_alive = float("-inf")
         self._short = 0
         self._ever_connected = False
-        self._client = self._build(longest_wait_s)
-        self._secure(user, secret_file, ca_file, plain_password)
-        if publish:
-            self._client.will_set(self._root + "alive", will, qos=1, retain=True)
+        self._tls = tls_context(ca_file) if ca_file else None
+        self._user, self._will, self._longest_wait_s = user, will, longest_wait_s
+        self._password = self._secret(secret_file, plain_password) if user else None
+        self._client = self._build()
 
     @property
     def connected(self) -> bool:
@@ -140,16 +140,18 @@ class Bus:
                 said.wait_for_publish(wait_s)
         self._client.disconnect()
         self._client.loop_stop()
+        self._close_socket()
         self._connected = False
 
     def watch(self) -> None:
-        """Restart the network thread if it died; call it about once a second."""
+        """Begin anew if the network thread died; call it about once a second."""
         if self._stopping or self._thread is None or self._thread.is_alive():
             return
         self._tell("network thread restarted", "it had ended without being asked to")
         self._thread = None
         self._lost()
-        self._client.loop_stop()
+        self._close_socket()
+        self._client = self._build()  # one client whose thread died is not to be trusted
         self.start()
 
     def acknowledge(self, tokens: Iterable[Token]) -> int:
@@ -186,7 +188,13 @@ class Bus:
         self._last_alive = now
         return self.publish(self._root + "alive", word, retain=True)
 
-    def _build(self, longest_wait_s: int) -> Client:
+    def _close_socket(self) -> None:
+        """paho leaves it open when its thread ended before it had said goodbye."""
+        left = self._client.socket()
+        if left is not None:
+            left.close()
+
+    def _build(self) -> Client:
         client = Client(
             CallbackAPIVersion.VERSION2,
             client_id=self.client_name,
@@ -195,9 +203,15 @@ class Bus:
             manual_ack=True,
         )
         client.suppress_exceptions = True  # one in a callback would end the network thread
-        client.reconnect_delay_set(1, longest_wait_s)
+        client.reconnect_delay_set(1, self._longest_wait_s)
         client.max_queued_messages_set(1000)
         client.max_inflight_messages_set(100)
+        if self._tls is not None:
+            client.tls_set_context(self._tls)
+        if self._user:
+            client.username_pw_set(self._user, self._password)
+        if self._publish:
+            client.will_set(self._root + "alive", self._will, qos=1, retain=True)
         client.on_pre_connect = self._on_pre_connect
         client.on_connect = self._on_connect
         client.on_connect_fail = self._on_connect_fail
@@ -206,17 +220,13 @@ class Bus:
         client.on_message = self._on_message
         return client
 
-    def _secure(self, user: str, secret_file: str, ca_file: str, plain_password: bool) -> None:
-        if ca_file:
-            self._client.tls_set_context(tls_context(ca_file))
-        if not user:
-            return
-        if not ca_file and self.host not in LOCAL_HOSTS and not plain_password:
+    def _secret(self, secret_file: str, plain_password: bool) -> str | None:
+        if self._tls is None and self.host not in LOCAL_HOSTS and not plain_password:
             raise SettingsError(
-                f"bus: the password of {user!r} would travel to {self.host} unencrypted; "
+                f"bus: the password of {self._user!r} would travel to {self.host} unencrypted; "
                 "name the broker's ca_file"
             )
-        self._client.username_pw_set(user, read_secret(secret_file) if secret_file else None)
+        return read_secret(secret_file) if secret_file else None
 
     def _on_pre_connect(self, client: Client, userdata: Any) -> None:
         self._thread = threading.current_thread()
@@ -252,7 +262,7 @@ class Bus:
             self._tell("callback failed", f"on connecting: {error!r}")
 
     def _on_connect_fail(self, client: Client, userdata: Any) -> None:
-        hint = " or its certificate does not fit ca_file and host" if self._encrypted else ""
+        hint = " or its certificate does not fit ca_file and host" if self._tls is not None else ""
         self._trouble("no broker", f"{self.host}:{self.port} does not answer{hint}; trying again")
 
     def _on_disconnect(

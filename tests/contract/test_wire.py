@@ -243,6 +243,35 @@ def test_an_exception_in_a_callback_does_not_end_the_network_thread(broker: Mosq
         bus.stop()
 
 
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnhandledThreadExceptionWarning")  # the aim
+def test_a_dead_network_thread_is_noticed_and_replaced(broker: Mosquitto) -> None:
+    """Never trust "connected": the daemon's watch looks at the thread itself."""
+
+    class Deadly(SystemClock):
+        def monotonic(self) -> float:
+            if armed:
+                armed.clear()
+                raise SystemExit  # passes every "except Exception" and ends a thread
+            return super().monotonic()
+
+    armed: list[int] = []
+    sink: queue.Queue[Arrival] = queue.Queue(10)
+    bus = Bus("p1", ["plates/p1/#"], sink, Deadly(), port=broker.port)
+    bus.start()
+    try:
+        assert wait_for(lambda: bus.connected)
+        time.sleep(0.3)
+        armed.append(1)
+        broker.publish("plates/p1/sensor/T1", "1")
+        assert wait_for(lambda: not bus.thread_alive)
+        assert bus.connected, "which is the trap"
+        bus.watch()
+        assert sink.get(timeout=8).payload == b"1", "not acknowledged, so it came again"
+        assert bus.thread_alive
+    finally:
+        bus.stop()
+
+
 def test_a_second_daemon_of_the_same_name_is_a_loud_error(broker: Mosquitto) -> None:
     """Two clients of one name throw each other out for ever; both are told why."""
     with Watch(broker.port, longest_wait_s=1) as first, Watch(broker.port, longest_wait_s=1):
