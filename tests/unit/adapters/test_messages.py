@@ -141,6 +141,13 @@ def test_one_message_brings_many_channels_and_keeps_the_good_ones() -> None:
     assert [r.reason for r in found.refusals] == [Reason.NOT_A_NUMBER, Reason.UNKNOWN_CHANNEL]
 
 
+@pytest.mark.parametrize("value", ["true", '"121"', "[1]", "{}", "1e999"])
+def test_a_member_that_is_no_number_is_never_taken_for_one(value: str) -> None:
+    """A gateway that sends true for an open input must not be read as 1 degC."""
+    found = on("readings", f'{{"sensor/T1": {value}}}')
+    assert reason(found) in (Reason.NOT_A_NUMBER, Reason.NOT_JSON)
+
+
 @pytest.mark.parametrize(
     "member",
     ['"at": "2026-03-01T08:00:00Z"', f'"at_ms": {NOW // 1000}', f'"at_us": {NOW}'],
