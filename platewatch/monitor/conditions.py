@@ -22,6 +22,7 @@ SHORTEST_OFF_DELAY_S = 30.0
 TOO_SHORT_S = 180.0
 BLIND_AFTER_S = 10.0
 BLIND_AFTER_SAMPLES = 3
+BLIND_AFTER_UNKNOWN_S = 180.0
 TOO_SHORT_TEXT = (
     "Too short to rely on a person: follow the site's over-temperature procedure now; "
     "platewatch switches nothing."
@@ -202,7 +203,12 @@ def sensor_over(words: Words, limit: AlarmLimit, sensor: str, reading_degC: floa
 
 
 def blind_after_us(interval_us: int) -> int:
-    """Three sample times, or 10 s where samples come faster than that."""
+    """Three sample times, or 10 s where samples come faster than that.
+
+    interval_us: 0 where it is not known yet; then samples may be a minute apart.
+    """
+    if interval_us <= 0:
+        return round(BLIND_AFTER_UNKNOWN_S * 1e6)
     return max(round(BLIND_AFTER_S * 1e6), BLIND_AFTER_SAMPLES * interval_us)
 
 

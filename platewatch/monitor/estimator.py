@@ -38,6 +38,12 @@ THETA_MEMORY_S = 30 * 86400.0
 MISFIT_S = 30.0
 MISFIT_MOST = 2.0
 MISFIT_AT_ONCE = 4.0
+# Over a time without ticks the losses are linearised anew this often.
+LONGEST_STEP_US = 120_000_000
+# Readings that come back after this long, and miss what is expected of them by about four
+# standard deviations each, tell that the plate was not left alone: start from them.
+FORGET_AFTER_US = 300_000_000
+FORGET_NIS = 16.0
 # Half of the losses' relative uncertainty may differ from place to place.
 LOCAL_SHARE = 0.5
 
@@ -367,9 +373,17 @@ def _condition(
 
 
 def restarted(quiet: Quiet, state: FieldState, at_us: int) -> FieldState:
-    """The state carried over a time without readings, its uncertainty grown by it."""
-    gap_us = at_us - state.at_us
-    if gap_us <= 0:
-        return replace(state, at_us=at_us)
-    belief, heater_W = forecast_step(quiet, state, gap_us, state.called_W, state.around)
-    return FieldState(at_us, belief, heater_W, state.called_W, state.around, state.misfit)
+    """The state carried over a time without readings, its uncertainty grown by it.
+
+    The last watts called for are held; steps are short enough for bent losses.
+    """
+    while state.at_us < at_us:
+        dt_us = min(at_us - state.at_us, LONGEST_STEP_US)
+        belief, heater_W = forecast_step(quiet, state, dt_us, state.called_W, state.around)
+        state = replace(state, at_us=state.at_us + dt_us, belief=belief, heater_W=heater_W)
+    return replace(state, at_us=at_us)
+
+
+def is_another_plate(innovation: Innovation) -> bool:
+    """Do the readings tell of a field that nothing carried over explains?"""
+    return bool(innovation.rows) and innovation.nis > FORGET_NIS * len(innovation.rows)

@@ -35,12 +35,12 @@ NEAR_S = 60.0  # every step is looked at up to here, every third one beyond
 class LoopStart:
     """What the controllers are doing now.
 
-    duty (nz,): 0..1 as logged;  error_K (nz,): set-point minus reading;
+    duty (nz,): 0..1 as logged;  integral (nz,): part of it that the error does not explain;
     set_points (nz, steps): along the horizon;  live (nz,): loop and both are known
     """
 
     duty: Array
-    error_K: Array
+    integral: Array
     set_points: Array
     live: NDArrayBool
 
@@ -93,7 +93,7 @@ def carry(
     p = np.repeat(state.heater_W[:, None], X.shape[1], axis=1)
     control = loops.sensor.astype(np.int64)
     beta = X[k.beta][control]
-    integral = np.repeat((start.duty - loops.gain * start.error_K)[:, None], X.shape[1], axis=1)
+    integral = np.repeat(start.integral[:, None], X.shape[1], axis=1)
     live = (start.live & (loops.closed > 0))[:, None]
     duty_now = np.repeat(start.duty[:, None], X.shape[1], axis=1)
     before = y[k.modes + control] + beta

@@ -141,7 +141,7 @@ def _sensors(
             continue
         if seen[i]:
             spacing = (stamps[-1] - seen[i]) // len(stamps)
-            interval[i] = spacing if not interval[i] else (7 * interval[i] + spacing) // 8
+            interval[i] = _interval_us(interval[i], spacing)
         degC[i], seen[i] = values[-1], stamps[-1]
         middle = sum(s - tick.at_us for s in stamps) / len(stamps)
         share = float(np.clip(1 + middle / tick.dt_us, 0.0, 1.0))
@@ -154,6 +154,13 @@ def _sensors(
         raw_trouble=tuple(trouble),
     )
     return heard, found
+
+
+def _interval_us(before: int, spacing: int) -> int:
+    """Running mean of the time between readings; an outage is no sample time."""
+    if not before:
+        return spacing
+    return (7 * before + min(spacing, 2 * before)) // 8
 
 
 def _duties(

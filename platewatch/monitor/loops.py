@@ -10,6 +10,7 @@ from platewatch.monitor.recipe import Do, Recipe
 from platewatch.thermal.plate import DutyLaw, Loop, LoopForm, Plate, Zone
 from platewatch.types import Array
 
+AT_LIMIT = 1e-3  # a duty this near to its limit is at it
 RAMP_MATCH = 0.15  # a set-point slope within 15 % of a recipe's rate is that ramp
 
 
@@ -68,6 +69,22 @@ class Loops:
         )
         rate = self.gain[:, None] * error_K / self.integral_s[:, None]
         return np.asarray(integral + np.where(stuck, 0.0, rate) * dt_s)
+
+    def follow(self, integral: Array, duty: Array, error_K: Array, dt_s: float) -> Array:
+        """The integral part (nz,) with which the controllers come to ask for `duty`.
+
+        integral: what it was dt_s ago, nan where not known;  error_K: set-point - reading.
+        Between the limits it follows from duty and error.  At a limit duty tells nothing
+        more: the integral goes on from where it was, or from within the limits, as far as
+        it explains the duty; taken from duty and error it would be wound up.
+        """
+        direct = duty - self.gain * error_K
+        known = np.where(np.isnan(integral), np.clip(direct, self.low, self.high), integral)
+        wanted = self.gain * error_K + known
+        moved = self.next_integral(error_K[:, None], known[:, None], wanted[:, None], dt_s)[:, 0]
+        at_high, at_low = duty >= self.high - AT_LIMIT, duty <= self.low + AT_LIMIT
+        held = np.where(at_high, np.maximum(moved, direct), np.minimum(moved, direct))
+        return np.where(at_high | at_low, held, direct)
 
 
 def _ideal(loop: Loop) -> tuple[float, float, float]:

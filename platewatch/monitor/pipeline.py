@@ -14,11 +14,15 @@ from platewatch.monitor import conditions as ask
 from platewatch.monitor.alarms import ACTIVE, Alarm, Condition, Event, judge, next_state
 from platewatch.monitor.conditions import Estimate, Words
 from platewatch.monitor.estimator import (
+    FORGET_AFTER_US,
+    LONGEST_STEP_US,
     FieldState,
     Observed,
     Quiet,
     advance,
     first_state,
+    is_another_plate,
+    restarted,
 )
 from platewatch.monitor.forecast import (
     LoopStart,
@@ -111,6 +115,7 @@ class State:
     blind: bool = False
     shot_us: int = 0
     power_us: int = 0
+    integral: Array | None = None  # (nz,) of the controllers, nan where not known
 
 
 def first(monitor: Monitor) -> State:
@@ -147,7 +152,7 @@ def resume(
 def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
     """One tick of one plate."""
     heard, seen = take_in(monitor.quiet, state.heard, tick, monitor.unit)
-    state = replace(state, heard=heard)
+    state = replace(state, heard=heard, integral=_controllers(monitor, state, heard, tick))
     if state.picture is None and not seen.sensors:
         alarms, events = _acknowledge(monitor, state.alarms, tick)
         return replace(state, alarms=alarms), Outcome(
@@ -184,12 +189,17 @@ def _see(
 ) -> tuple[State, tuple[Gap, ...]]:
     """Move the field to the end of the tick and take in its readings."""
     if state.picture is None:
-        began = replace(state, picture=first_state(monitor.quiet, tick.at_us, seen))
-        return replace(began, started_us=tick.at_us, silent_since_us=tick.at_us), ()
-    dt_us = tick.at_us - state.picture.at_us
-    moved, _ = advance(monitor.quiet, state.picture, dt_us, seen)
-    state = replace(state, picture=moved)
+        return _begun(monitor, state, tick, seen), ()
     silent_us = tick.at_us - state.silent_since_us
+    # A tick that stands for a long silence is gone through in short steps.
+    last_us = tick.dt_us if seen.sensors else min(tick.dt_us, LONGEST_STEP_US)
+    start = restarted(monitor.quiet, state.picture, tick.at_us - last_us)
+    moved, innovation = advance(monitor.quiet, start, tick.at_us - start.at_us, seen)
+    if silent_us >= FORGET_AFTER_US and is_another_plate(innovation):
+        since = state.silent_since_us
+        state = replace(_begun(monitor, state, tick, seen), silent_since_us=since)
+    else:
+        state = replace(state, picture=moved)
     blind = not seen.sensors and silent_us >= _blind_after_us(state)
     gaps: tuple[Gap, ...] = ()
     if seen.sensors:
@@ -198,6 +208,15 @@ def _see(
             gaps = (Gap(state.silent_since_us, tick.at_us, "no usable reading"),)
         state = replace(state, silent_since_us=tick.at_us)
     return replace(state, blind=blind), gaps
+
+
+def _begun(monitor: Monitor, state: State, tick: Tick, seen: Observed) -> State:
+    """The picture made from this tick's readings alone."""
+    picture = first_state(monitor.quiet, tick.at_us, seen)
+    at_us = tick.at_us
+    return replace(
+        state, picture=picture, started_us=at_us, silent_since_us=at_us, settled=False, ahead=None
+    )
 
 
 def _blind_after_us(state: State) -> int:
@@ -225,18 +244,35 @@ def _forecast_due(monitor: Monitor, state: State, tick: Tick) -> bool:
     return tick.at_us - state.ahead.at_us >= round(monitor.forecast.every_s * 1e6)
 
 
+def _errors_K(monitor: Monitor, heard: Heard) -> Array:
+    """(nz,) set-point minus reading of each loop; nan where loop, reading or duty is not known."""
+    error = heard.set_point - heard.degC[monitor.loops.sensor.astype(np.int64)]
+    return np.where(np.isfinite(heard.duty) & (monitor.loops.closed > 0), error, np.nan)
+
+
+def _controllers(monitor: Monitor, state: State, heard: Heard, tick: Tick) -> Array:
+    """What the controllers' integrals have come to, as far as can be told from outside."""
+    before = state.integral
+    if before is None:
+        before = np.full(heard.duty.size, np.nan)
+    error = _errors_K(monitor, heard)
+    live = np.isfinite(error)
+    duty, error = np.where(live, heard.duty, 0.0), np.where(live, error, 0.0)
+    after = monitor.loops.follow(before, duty, error, tick.dt_us / 1e6)
+    return np.where(live, after, np.nan)
+
+
 def loop_start(monitor: Monitor, state: State) -> LoopStart:
     """What the controllers are doing, from what was last heard of them."""
-    heard, loops = state.heard, monitor.loops
-    reading = heard.degC[loops.sensor.astype(np.int64)]
+    heard = state.heard
     ahead = set_points_ahead(
         heard.set_point, heard.set_point_slope, monitor.recipes, horizon_times(monitor.forecast)
     )
-    error = heard.set_point - reading
-    live = np.isfinite(error) & np.isfinite(heard.duty)
+    live = np.isfinite(_errors_K(monitor, heard))
+    integral = np.zeros(live.size) if state.integral is None else state.integral
     return LoopStart(
         duty=np.nan_to_num(heard.duty),
-        error_K=np.where(live, error, 0.0),
+        integral=np.nan_to_num(integral),
         set_points=np.where(live[:, None], ahead, 0.0),
         live=live,
     )

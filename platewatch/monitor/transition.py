@@ -24,6 +24,10 @@ from scipy.linalg import expm
 from platewatch.types import Array
 
 
+def _place() -> slice:
+    return field(init=False, repr=False, compare=False)  # type: ignore[no-any-return]
+
+
 @dataclass(frozen=True)
 class Blocks:
     """Where each part of the state lies."""
@@ -33,34 +37,21 @@ class Blocks:
     bumps: int
     sensors: int
     parameters: int
+    size: int = field(init=False)
+    a: slice = _place()
+    d: slice = _place()
+    b: slice = _place()
+    L: slice = _place()
+    beta: slice = _place()
+    theta: slice = _place()
 
-    @property
-    def a(self) -> slice:
-        return slice(0, self.modes)
-
-    @property
-    def d(self) -> slice:
-        return slice(self.a.stop, self.a.stop + self.zones)
-
-    @property
-    def b(self) -> slice:
-        return slice(self.d.stop, self.d.stop + self.bumps)
-
-    @property
-    def L(self) -> slice:
-        return slice(self.b.stop, self.b.stop + self.sensors)
-
-    @property
-    def beta(self) -> slice:
-        return slice(self.L.stop, self.L.stop + self.sensors)
-
-    @property
-    def theta(self) -> slice:
-        return slice(self.beta.stop, self.beta.stop + self.parameters)
-
-    @property
-    def size(self) -> int:
-        return self.theta.stop
+    def __post_init__(self) -> None:
+        sizes = (self.modes, self.zones, self.bumps, self.sensors, self.sensors, self.parameters)
+        start = 0
+        for name, count in zip(("a", "d", "b", "L", "beta", "theta"), sizes, strict=True):
+            object.__setattr__(self, name, slice(start, start + count))
+            start += count
+        object.__setattr__(self, "size", start)
 
 
 @dataclass(frozen=True)
