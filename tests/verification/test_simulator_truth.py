@@ -238,7 +238,7 @@ def _adiabatic_s(soaked: Simulation, degC: float) -> float:
     zone = plate.zones[4]
     areal = STATED_ERROR.cp * plate.material.rho * 490.0 * plate.thickness_m
     extra_W = STATED_ERROR.power * zone.watts - soaked.copy().step().truth.watts["Z5"]
-    rate = extra_W / (areal * 0.38**2)
+    rate = extra_W / (areal * 0.39**2)
     return float((degC - soaked.truth.peak()[0]) / rate)
 
 

@@ -210,12 +210,12 @@ def test_every_description_in_config_is_valid(path: Path) -> None:
 
 
 def test_the_demo_table_is_the_plate_of_the_demo() -> None:
-    """Six zones of 380 mm with 10 mm all round, nine thermocouples, limits 135 and 150."""
+    """Six zones of 390 mm, 10 mm between neighbours, nine thermocouples, limits 135 and 150."""
     demo = load(CONFIG / "demo-table.toml")
     plate = demo.plate
     assert plate.name == "table-1"
     assert sum(zone.watts for zone in plate.zones) == pytest.approx(6600.0)
-    assert [p.geometry(z.shapes[0]).area for z in plate.zones] == pytest.approx([0.38**2] * 6)
+    assert [p.geometry(z.shapes[0]).area for z in plate.zones] == pytest.approx([0.39**2] * 6)
     assert [s.x_m for s in plate.sensors] == [0.2, 0.6, 1.0, 0.2, 0.6, 1.0, 0.4, 0.8, 1.14]
     assert [s.y_m for s in plate.sensors] == [0.2, 0.2, 0.2, 0.6, 0.6, 0.6, 0.4, 0.4, 0.4]
     assert {zone.loop.sensor: zone.name for zone in plate.zones if zone.loop} == {
