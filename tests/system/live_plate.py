@@ -1,0 +1,129 @@
+"""A running daemon, a broker of its own and a publisher, for the system tests."""
+
+from __future__ import annotations
+
+import json
+import sqlite3
+import subprocess
+import sys
+import time
+from collections.abc import Callable, Mapping
+from pathlib import Path
+
+from paho.mqtt.client import Client
+from paho.mqtt.enums import CallbackAPIVersion
+
+from platewatch.units import iso
+
+PLATE = Path(__file__).resolve().parents[2] / "config" / "demo-table.toml"
+SENSORS = [f"sensor/T{n}" for n in range(1, 10)]
+DUTIES = [f"zone/Z{n}/duty" for n in range(1, 7)]
+TABLES = {
+    "peak": "*",
+    "zone_power": "*",
+    "alarm_limit_probability": "*",
+    "alarm_event": "at_us, alarm, subject, place, from_state, to_state, priority, value, "
+    "limit_value, cause, group_no, person, reason, message",
+    "field_shot": "at_us, basis, state",
+    "gap": "from_us AS at_us, to_us, what",
+}
+
+
+def wait_for(truth: Callable[[], object], within_s: float) -> bool:
+    """Ask again and again until it holds; False when it did not in time."""
+    end = time.monotonic() + within_s
+    while time.monotonic() < end:
+        if truth():
+            return True
+        time.sleep(0.05)
+    return bool(truth())
+
+
+def rows(record: Path, table: str) -> list[tuple[object, ...]]:
+    """What a table holds, in order of time."""
+    with sqlite3.connect(record) as connection:
+        found = connection.execute(f"SELECT {TABLES[table]} FROM {table} ORDER BY at_us").fetchall()
+    connection.close()
+    return found
+
+
+def count(record: Path, table: str, where: str = "1") -> int:
+    """Rows of a table; none while the daemon has not made it yet."""
+    connection = sqlite3.connect(record)
+    try:
+        known = "SELECT count(*) FROM sqlite_master WHERE name = ?"
+        if not connection.execute(known, (table,)).fetchone()[0]:
+            return 0
+        return int(connection.execute(f"SELECT count(*) FROM {table} WHERE {where}").fetchone()[0])
+    finally:
+        connection.close()
+
+
+def assert_same(live: list[tuple[object, ...]], again: list[tuple[object, ...]]) -> None:
+    """Row by row: numbers to 1e-9, everything else exactly."""
+    assert len(live) == len(again)
+    for one, other in zip(live, again, strict=True):
+        for a, b in zip(one, other, strict=True):
+            if isinstance(a, float) and isinstance(b, float):
+                assert abs(a - b) <= 1e-9, (one, other)
+            else:
+                assert a == b, (one, other)
+
+
+class Daemon:
+    """`platewatch run` as a process of its own, its log in a file."""
+
+    def __init__(self, port: int, record: Path, *more: str) -> None:
+        self.log_path = record.with_suffix(f".{time.monotonic_ns()}.log")
+        with self.log_path.open("w") as log:
+            self._process = subprocess.Popen(
+                [
+                    *(sys.executable, "-m", "platewatch", "run", str(PLATE)),
+                    *("--broker", f"127.0.0.1:{port}", "--db", str(record), *more),
+                ],
+                stderr=log,
+            )
+
+    @property
+    def log(self) -> str:
+        return self.log_path.read_text()
+
+    def said(self, text: str, within_s: float = 20.0) -> bool:
+        return wait_for(lambda: text in self.log, within_s)
+
+    def terminate(self) -> int:
+        self._process.terminate()
+        return self._process.wait(20)
+
+    def kill(self) -> None:
+        self._process.kill()
+        self._process.wait(20)
+
+
+class Gateway:
+    """Sends readings of every sensor and duty, QoS 1, with source times."""
+
+    def __init__(self, port: int) -> None:
+        self._client = Client(CallbackAPIVersion.VERSION2, client_id="gateway")
+        self._client.connect("127.0.0.1", port)
+        self._client.loop_start()
+        self.sent = 0
+
+    def send(self, at_us: int, more: Mapping[str, float] | None = None) -> None:
+        values = dict.fromkeys(SENSORS, 120.0 + 0.1 * (self.sent % 3))
+        values |= dict.fromkeys(DUTIES, 0.25)
+        body = {"at": iso(at_us), **values, **(more or {})}
+        said = self._client.publish("plates/table-1/readings", json.dumps(body), qos=1)
+        said.wait_for_publish(10)
+        self.sent += 1
+
+    def send_for(self, seconds: float, every_s: float = 0.25) -> None:
+        """Live readings for so long."""
+        end = time.monotonic() + seconds
+        while time.monotonic() < end:
+            self.send(time.time_ns() // 1000)
+            time.sleep(every_s)
+
+    def close(self) -> None:
+        self._client.disconnect()
+        self._client.loop_stop()

@@ -1,0 +1,93 @@
+"""The daemon as a process: starts, stops, kills, a broker that is not there."""
+
+from __future__ import annotations
+
+import time
+from pathlib import Path
+
+import pytest
+from live_plate import PLATE, TABLES, Daemon, Gateway, assert_same, count, rows, wait_for
+
+from platewatch.adapters.broker import EmbeddedBroker, free_port
+from platewatch.cli import main
+
+pytest.importorskip("iotcore", reason="needs the extra platewatch[demo]")
+
+CHANNELS = 15
+
+
+def test_a_daemon_that_is_stopped_killed_and_started_loses_no_reading(tmp_path: Path) -> None:
+    """Design, section 4: what is acknowledged is stored; a restart goes on from the record.
+
+    And a replay of all three runs gives their rows.
+    """
+    record = tmp_path / "r.sqlite"
+    with EmbeddedBroker() as broker:
+        gateway = Gateway(broker.port)
+        daemon = Daemon(broker.port, record)
+        assert daemon.said("connected")
+        gateway.send_for(5.0)
+        assert daemon.said("first readings: 9 of 9 sensors, 6 of 6 duties")
+        assert daemon.terminate() == 0
+        assert "run 1 stopped" in daemon.log
+        gateway.send_for(1.0)  # the broker keeps these
+
+        daemon = Daemon(broker.port, record)
+        assert daemon.said("connected")
+        gateway.send_for(5.0)
+        daemon.kill()
+        gateway.send_for(1.0)
+
+        daemon = Daemon(broker.port, record)
+        assert daemon.said("from where the record ends")
+        gateway.send_for(5.0)
+        assert wait_for(lambda: count(record, "reading") == gateway.sent * CHANNELS, 10)
+        assert daemon.terminate() == 0
+        gateway.close()
+    assert count(record, "run") == 3
+    assert count(record, "peak") > 5
+    assert "Traceback" not in daemon.log
+    again = tmp_path / "again.sqlite"
+    assert main(["replay", str(PLATE), str(record), "--db", str(again)]) in (0, 1)
+    for table in TABLES:
+        assert_same(rows(record, table), rows(again, table))
+
+
+def test_a_daemon_starts_without_a_broker_and_finds_it_later(tmp_path: Path) -> None:
+    """Job, chapter 7: the first connection is retried; one plain line, no flood."""
+    port = free_port()
+    daemon = Daemon(port, tmp_path / "r.sqlite")
+    assert daemon.said("no broker")
+    time.sleep(3)
+    assert len(daemon.log.splitlines()) <= 3
+    with EmbeddedBroker(port):
+        assert daemon.said("connected", 40)
+        assert daemon.terminate() == 0
+    assert "Traceback" not in daemon.log
+
+
+def test_a_second_daemon_on_the_same_record_is_turned_away(tmp_path: Path) -> None:
+    """Design, section 4: a lock file beside the database; a loud, clear error."""
+    port = free_port()
+    first = Daemon(port, tmp_path / "r.sqlite")
+    assert first.said("run 1 starts")
+    second = Daemon(port, tmp_path / "r.sqlite")
+    assert second.said("another daemon")
+    assert second._process.wait(10) == 4
+    assert first.terminate() == 0
+
+
+def test_refused_readings_are_told_once_a_minute(tmp_path: Path) -> None:
+    """A flood of the same mistake is one line with its reason, not one a message."""
+    with EmbeddedBroker() as broker:
+        gateway = Gateway(broker.port)
+        daemon = Daemon(broker.port, tmp_path / "r.sqlite")
+        assert daemon.said("connected")
+        for _ in range(40):
+            gateway.send(time.time_ns() // 1000, {"sensor/T77": 1.0})
+        assert daemon.said("first readings")
+        assert daemon.terminate() == 0
+        gateway.close()
+    told = [line for line in daemon.log.splitlines() if "refused" in line]
+    assert len(told) == 1
+    assert "did you mean sensor/T" in told[0]
