@@ -24,10 +24,6 @@ from scipy.linalg import expm
 from platewatch.types import Array
 
 
-def _place() -> slice:
-    return field(init=False, repr=False, compare=False)  # type: ignore[no-any-return]
-
-
 @dataclass(frozen=True)
 class Blocks:
     """Where each part of the state lies."""
@@ -38,12 +34,12 @@ class Blocks:
     sensors: int
     parameters: int
     size: int = field(init=False)
-    a: slice = _place()
-    d: slice = _place()
-    b: slice = _place()
-    L: slice = _place()
-    beta: slice = _place()
-    theta: slice = _place()
+    a: slice = field(init=False, repr=False, compare=False)
+    d: slice = field(init=False, repr=False, compare=False)
+    b: slice = field(init=False, repr=False, compare=False)
+    L: slice = field(init=False, repr=False, compare=False)
+    beta: slice = field(init=False, repr=False, compare=False)
+    theta: slice = field(init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         sizes = (self.modes, self.zones, self.bumps, self.sensors, self.sensors, self.parameters)
