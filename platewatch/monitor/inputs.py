@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -15,6 +16,7 @@ from platewatch.units import to_degC as unit_to_degC
 
 SLOPE_SPAN_US = 60_000_000  # set-points of the last minute give their slope
 SLOPE_LEAST_US = 20_000_000
+POINT_SPACING_US = 1_000_000  # of set-points that come faster, one a second is kept
 DUTY_SLACK = 1.02  # a duty up to 2 % beyond full scale is rounding, not a mistake
 
 
@@ -25,7 +27,8 @@ class Heard:
     degC (ns,), sensor_us (ns,): last reading and its stamp, nan and 0 before the first
     interval_us (ns,): running mean of the time between readings
     duty (nz,): 0..1, nan before the first;  set_points: recent (at_us, degC) by zone
-    around (nu,) degC;  raw_trouble: why a sensor's last value was no temperature
+    around (nu,) degC;  junctions: terminal blocks by channel, degC
+    raw_trouble: why a sensor's last value was no temperature
     """
 
     degC: Array
@@ -35,6 +38,7 @@ class Heard:
     set_points: tuple[tuple[tuple[int, float], ...], ...]
     around: Array
     raw_trouble: tuple[str, ...]
+    junctions: Mapping[str, float] = field(default_factory=dict)
 
     @property
     def set_point(self) -> Array:
@@ -75,13 +79,9 @@ def take_in(
     for reading in tick.readings:
         if reading.usable:
             by_channel.setdefault(reading.channel, []).append(reading)
-    around = heard.around.copy()
-    surround = {n: r[-1].value for n, r in by_channel.items() if n.startswith("surround/")}
-    for i, name in enumerate(quiet.around_names):
-        if name in surround:
-            around[i] = unit_to_degC(surround[name], unit)
-    heard = replace(heard, around=around)
-    heard, sensors = _sensors(quiet, heard, tick, by_channel, unit)
+    heard = _surroundings(quiet, heard, by_channel, unit)
+    around = heard.around
+    heard, sensors = _sensors(quiet, heard, tick, by_channel)
     called, heard = _duties(quiet, heard, tick, by_channel)
     heard = replace(heard, set_points=_set_points(quiet, heard, by_channel, unit))
     share = np.array([_share_of_watts(quiet, i, d) for i, d in enumerate(heard.duty)])
@@ -103,15 +103,21 @@ def _share_of_watts(quiet: Quiet, zone: int, duty: float) -> float:
     return 0.0 if np.isnan(duty) else float(z.watts * delivered_share(z, duty))
 
 
-def _cold_junctions(
+def _surroundings(
     quiet: Quiet, heard: Heard, readings: dict[str, list[Reading]], unit: TemperatureUnit
-) -> dict[str, float]:
-    """Temperatures of the terminal blocks that are measured, by channel."""
-    known = dict(zip(quiet.around_names, heard.around, strict=True))
-    for name, rows in readings.items():
-        if name.startswith("surround/"):
-            known[name] = unit_to_degC(rows[-1].value, unit)
-    return known
+) -> Heard:
+    """Room and terminal blocks: each holds until it is heard again."""
+    new = {
+        name: unit_to_degC(rows[-1].value, unit)
+        for name, rows in readings.items()
+        if name.startswith("surround/")
+    }
+    if not new:
+        return heard
+    around = np.array(
+        [new.get(n, old) for n, old in zip(quiet.around_names, heard.around, strict=True)]
+    )
+    return replace(heard, around=around, junctions={**heard.junctions, **new})
 
 
 def _sensors(
@@ -119,10 +125,8 @@ def _sensors(
     heard: Heard,
     tick: Tick,
     readings: dict[str, list[Reading]],
-    unit: TemperatureUnit,
 ) -> tuple[Heard, list[tuple[int, float, int, float]]]:
     """(sensor, mean degC, how many, share of the tick) for each sensor that spoke."""
-    junctions = _cold_junctions(quiet, heard, readings, unit)
     degC, seen = heard.degC.copy(), list(heard.sensor_us)
     interval, trouble = list(heard.interval_us), list(heard.raw_trouble)
     found = []
@@ -131,7 +135,9 @@ def _sensors(
         for r in readings.get(f"sensor/{sensor.name}", ()):
             junction = sensor.cold_junction
             signal = to_degC(
-                sensor, r.value, junctions.get(junction) if isinstance(junction, str) else None
+                sensor,
+                r.value,
+                heard.junctions.get(junction) if isinstance(junction, str) else None,
             )
             trouble[i] = signal.reason
             if signal.degC is not None:
@@ -187,9 +193,12 @@ def _set_points(
 ) -> tuple[tuple[tuple[int, float], ...], ...]:
     kept = []
     for zone, old in zip(quiet.plate.zones, heard.set_points, strict=True):
-        new = readings.get(f"zone/{zone.name}/setpoint", ())
-        points = old + tuple((r.at_us, unit_to_degC(r.value, unit)) for r in new)
+        points = list(old)
+        for r in readings.get(f"zone/{zone.name}/setpoint", ()):
+            if len(points) >= 2 and r.at_us - points[-2][0] < POINT_SPACING_US:
+                points.pop()
+            points.append((r.at_us, unit_to_degC(r.value, unit)))
         if points:
-            points = tuple(p for p in points if points[-1][0] - p[0] <= SLOPE_SPAN_US)
-        kept.append(points)
+            points = [p for p in points if points[-1][0] - p[0] <= SLOPE_SPAN_US]
+        kept.append(tuple(points))
     return tuple(kept)
