@@ -1,4 +1,4 @@
-"""How old readings are when they arrive: live, or the backlog of an outage."""
+"""How old readings are when they arrive, and whether this computer's clock can be trusted."""
 
 from __future__ import annotations
 
@@ -10,6 +10,7 @@ from platewatch.types import Flag, Reading
 BACKLOG_AFTER_US = 15_000_000  # older than this, a value no longer says what is now
 STEADY_US = 5_000_000  # ages within this of each other are one clock's offset
 STEADY_FOR_S = 30.0
+STEP_US = 1_000_000  # a clock that moves by more against the monotonic one was set
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,3 +43,19 @@ class Ages:
             replace(r, flags=r.flags | Flag.BACKLOG) if r.seen_us - r.at_us > limit else r
             for r in readings
         ]
+
+
+@dataclass(frozen=True, slots=True)
+class ClockWatch:
+    """Notices that this computer's clock was set: it moved against the monotonic one."""
+
+    ahead_us: int | None = None  # UTC minus monotonic, when last looked at
+
+    def look(self, utc_us: int, monotonic_s: float) -> tuple[ClockWatch, int]:
+        """The watch from now on, and the step in us, 0 for none."""
+        ahead_us = utc_us - round(monotonic_s * 1e6)
+        if self.ahead_us is None:
+            return ClockWatch(ahead_us), 0
+        step_us = ahead_us - self.ahead_us
+        # A slow drift is no step: it is measured anew at every look.
+        return ClockWatch(ahead_us), step_us if abs(step_us) > STEP_US else 0

@@ -12,9 +12,9 @@ from dataclasses import dataclass, field
 
 from platewatch import __version__, compose
 from platewatch import daemon_words as words
-from platewatch.arrival import Ages
+from platewatch.arrival import Ages, ClockWatch
 from platewatch.clock import Clock
-from platewatch.errors import StorageError
+from platewatch.errors import SettingsError, StorageError
 from platewatch.types import BatchEvent, LimitRow, Outcome, PeakRow, Reading
 
 COMMIT_EVERY_S = 1.0
@@ -25,6 +25,7 @@ MOST_AT_ONCE = 1000  # messages in one turn, so that the other plates are not ke
 MOST_UNSTORED = 50_000  # readings kept in memory while the record cannot be written
 CALM_LINE_EVERY_S = 600.0
 REMIND_EVERY_S = 600.0
+BACKLOG_WITHIN_S = 60.0  # of the bus coming back, a gateway sends what it kept
 
 
 @dataclass
@@ -76,10 +77,12 @@ class PlateRun:
             description.path.read_bytes(),
         )
         self._bus = compose.build_bus(description, self._routes, self._sink, clock, self.run_no)
-        self._ages, self._repeats = Ages(), words.Repeats()
+        self._ages, self._clock_watch, self._repeats = Ages(), ClockWatch(), words.Repeats()
         self._heard: Counter[str] = Counter()
         self._waiting, self._passing = Unstored(), dict[str, LimitRow]()
-        self._committed_s = self._polled_s = self._calm_s = self._down_s = clock.monotonic()
+        self._committed_s = self._polled_s = self._calm_s = self._reminded_s = clock.monotonic()
+        self._last_down_s = self._reminded_s
+        self._asked = False  # actions wait for a tick
         self._action_seq = self._take_up(closed_us)
 
     def _take_up(self, closed_us: int | None) -> int:
@@ -103,6 +106,7 @@ class PlateRun:
         """One round: take, estimate, store, answer.  True while there is more to do."""
         now_s = self._clock.monotonic()
         self._watch_bus(now_s)
+        self._watch_clock(now_s)
         took = self._take_messages()
         self._poll_actions(now_s)
         self.recent = self.session.close(self._ticker_clock(now_s))
@@ -128,10 +132,11 @@ class PlateRun:
         self._log.info("run %d stopped", self.run_no)
 
     def _ticker_clock(self, now_s: float) -> int | None:
-        """None while the bus is down and that was said: a backlog then finds its ticks open."""
-        if not self._bus.connected and (self.session.blind or self.latest is None):
-            return None
-        return round(now_s * 1e6)
+        """None while the bus is down or just back and that was said: a backlog then finds
+        its ticks open.  What a person asked for does not wait: it needs a tick."""
+        down = now_s - self._last_down_s < BACKLOG_WITHIN_S
+        said = self.session.blind or self.latest is None
+        return None if down and said and not self._asked else round(now_s * 1e6)
 
     def _take_messages(self) -> int:
         if len(self._waiting.readings) > MOST_UNSTORED:
@@ -163,7 +168,10 @@ class PlateRun:
     def _take_readings(self, arrived: Sequence[Reading]) -> None:
         live = [r.seen_us - r.at_us for r in arrived if r.usable]
         if live:
+            known_us = self._ages.offset_us
             self._ages = self._ages.seen(min(live), self._clock.monotonic())
+            if self._ages.offset_us != known_us:
+                self._note_clock(-self._ages.offset_us, "the sources' clock is off")
         late, twice = self.session.late, self.session.duplicates
         self._waiting.readings += [self.session.take(r) for r in self._ages.judge(arrived)]
         self._heard.update(r.channel for r in arrived if r.usable)
@@ -193,11 +201,12 @@ class PlateRun:
             self._store_trouble(error)
             return
         if actions:
-            self._action_seq = actions[-1].seq
+            self._action_seq, self._asked = actions[-1].seq, True
             self.session.act(actions)
 
     def _estimate(self, outcomes: Sequence[Outcome]) -> None:
         for outcome in outcomes:
+            self._asked = False
             if self.latest is None and outcome.peak is not None:
                 self._first_readings()
             self.latest = outcome.peak or self.latest
@@ -260,10 +269,25 @@ class PlateRun:
             event = self._bus.events.get()
             self._log.log(words.bus_level(event.what), "%s: %s", event.what, event.text)
         if self._bus.connected:
-            self._down_s = now_s
-        elif now_s - self._down_s >= REMIND_EVERY_S:
-            self._down_s = now_s
+            self._reminded_s = now_s
+            return
+        self._last_down_s = now_s
+        if now_s - self._reminded_s >= REMIND_EVERY_S:
+            self._reminded_s = now_s
             self._log.warning("still no broker at %s:%d", self._bus.host, self._bus.port)
+
+    def _watch_clock(self, now_s: float) -> None:
+        self._clock_watch, step_us = self._clock_watch.look(self._clock.utc_us(), now_s)
+        if step_us:
+            self._note_clock(step_us, "this computer's clock was set")
+
+    def _note_clock(self, offset_us: int, what: str) -> None:
+        """One line and one row; intervals here never depend on this clock."""
+        self._log.warning("%s by %+.0f s", what, offset_us / 1e6)
+        try:
+            self._store.note_clock(self.plate, self._clock.utc_us(), offset_us, what)
+        except StorageError as error:
+            self._store_trouble(error)
 
     def _calm_line(self, now_s: float) -> None:
         if now_s - self._calm_s < self._calm_every_s:
@@ -292,6 +316,11 @@ def run_daemon(
     Raises StorageError where a record cannot be opened or another daemon holds it,
     SettingsError or PlateError where a description cannot be used.
     """
+    for description in descriptions:
+        if not description.bus.enabled:
+            raise SettingsError(
+                f"{description.path}: [bus] enabled = false, so there is nothing to watch"
+            )
     monitors = [compose.build_monitor(description) for description in descriptions]
     with ExitStack() as stack:
         stores: dict[str, compose.Store] = {}
