@@ -28,8 +28,7 @@ from platewatch.types import Array
 
 MOST_EIGENMODES = 48
 LEAST_EIGENMODES = 27  # they carry what no description names: loads, faults
-FEW_ZONES = 4  # up to here two transient fields a zone, else one
-DECAY = (40.0, 10.0)  # of the transient fields, in diffusivity / area of a zone
+GROWTH = (40.0, 10.0)  # of the early fields, in diffusivity / area of a zone
 
 
 @dataclass(frozen=True, eq=False)
@@ -66,9 +65,11 @@ def reduce(model: ThermalModel, order: int | None = None, tolerance_K: float = 0
     tolerance_K, as far as 48 eigenmodes lead.  Raises PlateError for an order that
     cannot hold the static responses.
     """
-    fixed = _static_fields(model)
+    first, second = (_early_fields(model, growth) for growth in GROWTH)
+    fixed = np.column_stack((_static_fields(model), first))
     modes = _slowest_modes(model, MOST_EIGENMODES if order is None else order)
-    basis = _orthonormal(np.column_stack((fixed, modes)), model.capacity)
+    columns = (fixed, modes[:, :LEAST_EIGENMODES], second, modes[:, LEAST_EIGENMODES:])
+    basis = _orthonormal(np.column_stack(columns), model.capacity)
     least = min(basis.shape[1], _rank(fixed, model.capacity))
     if order is not None:
         if order < least:
@@ -140,21 +141,24 @@ def static_correction(reduced: ReducedModel, q: Array) -> tuple[Array, float]:
 
 
 def _static_fields(model: ThermalModel) -> Array:
-    """(n, k): constant, the settled response to every input, load place and to the offset,
-    then the zones' response to heat that grows as exp(s t): what they do shortly after a step."""
+    """(n, k): constant, then the settled response to every input, load place and the offset."""
     places = [footprint(model.grid, contact.shape) for contact in model.plate.contacts]
     heat = np.column_stack((model.B, model.offset, *places))
     heat = heat[:, np.abs(heat).max(axis=0) > 0]
-    answers = [model.static(heat)] if heat.size else []
+    answers = model.static(heat) if heat.size else np.empty((model.grid.n, 0))
+    return np.column_stack((np.ones(model.grid.n), answers))
+
+
+def _early_fields(model: ThermalModel, growth: float) -> Array:
+    """(n, zones): response to heat that grows as exp(s t), s = growth x diffusivity / area
+    of a zone: what the zones do shortly after a step."""
     zones = model.B[:, : len(model.plate.zones)]
-    if zones.size:
-        diffusivity = float(np.mean(model.stack.sheet_conductance(model.reference_degC)))
-        diffusivity *= float(model.grid.area.sum() / model.capacity.sum())
-        spread_m2 = model.grid.area.sum() / zones.shape[1]
-        for decay in DECAY if zones.shape[1] <= FEW_ZONES else DECAY[:1]:
-            growth = decay * diffusivity / spread_m2
-            answers.append(lu(model.K + diags_array(growth * model.capacity))(zones))
-    return np.column_stack((np.ones(model.grid.n), *answers))
+    if not zones.size:
+        return zones
+    sheet = float(np.mean(model.stack.sheet_conductance(model.reference_degC)))
+    diffusivity = sheet * float(model.grid.area.sum() / model.capacity.sum())
+    s = growth * diffusivity * zones.shape[1] / float(model.grid.area.sum())
+    return lu(model.K + diags_array(s * model.capacity))(zones)
 
 
 def _slowest_modes(model: ThermalModel, count: int) -> Array:

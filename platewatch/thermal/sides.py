@@ -50,7 +50,7 @@ def side_links(plate: Plate, grid: Grid, stack: Stack, number: dict[str, int]) -
     edges = [plate.edges[k] for k in rim.edge[active]]
     d = stack.thickness_m[rim.cell[active]]
     h = np.array([_edge_coefficient(e, depth) for e, depth in zip(edges, d, strict=True)])
-    with np.errstate(divide="ignore"):
+    with np.errstate(divide="ignore", over="ignore"):
         film = np.where(h > 0, 1 / h, np.inf)
     into = [number[ambient_name(_edge_ambient(plate, e))] for e in edges]
     cells, fixed, clamp_into = _clamps(plate, grid, number)
