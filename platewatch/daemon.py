@@ -135,8 +135,8 @@ class PlateRun:
         """None while the bus is down or just back and that was said: a backlog then finds
         its ticks open.  What a person asked for does not wait: it needs a tick."""
         down = now_s - self._last_down_s < BACKLOG_WITHIN_S
-        said = self.session.blind or self.latest is None
-        return None if down and said and not self._asked else round(now_s * 1e6)
+        waits = down and self.session.blind and not self._asked
+        return None if waits else round(now_s * 1e6)
 
     def _take_messages(self) -> int:
         if len(self._waiting.readings) > MOST_UNSTORED:

@@ -68,7 +68,7 @@ def demo_plate() -> Path:
         return beside
     try:
         installed = importlib.resources.files("platewatch_config") / PLATE_FILE
-    except ModuleNotFoundError:
+    except (ModuleNotFoundError, NotADirectoryError):
         installed = None
     if installed is None or not installed.is_file():
         raise SettingsError(f"{PLATE_FILE} was not installed; run the demo from a clone")

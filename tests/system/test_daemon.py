@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import json
 import time
 from pathlib import Path
 
 import pytest
 from live_plate import PLATE, TABLES, Daemon, Gateway, assert_same, count, rows, wait_for
+from paho.mqtt.client import Client
+from paho.mqtt.enums import CallbackAPIVersion
 
 from platewatch.adapters.broker import EmbeddedBroker, free_port
 from platewatch.cli import main
@@ -91,3 +94,32 @@ def test_refused_readings_are_told_once_a_minute(tmp_path: Path) -> None:
     told = [line for line in daemon.log.splitlines() if "refused" in line]
     assert len(told) == 1
     assert "did you mean sensor/T" in told[0]
+
+
+def test_the_bus_hears_peak_alive_and_stopped(tmp_path: Path) -> None:
+    """Design, section 4: every message carries `at` and `run`; an orderly stop says so."""
+    heard: dict[str, list[dict[str, object]]] = {}
+    with EmbeddedBroker() as broker:
+        listener = Client(CallbackAPIVersion.VERSION2, client_id="listener")
+        listener.on_message = lambda c, u, m: heard.setdefault(m.topic, []).append(
+            json.loads(m.payload)
+        )
+        listener.connect("127.0.0.1", broker.port)
+        listener.subscribe("platewatch/#", 1)
+        listener.loop_start()
+        gateway = Gateway(broker.port)
+        daemon = Daemon(broker.port, tmp_path / "r.sqlite")
+        assert daemon.said("connected")
+        gateway.send_for(6.0)
+        peak, alive = "platewatch/table-1/peak", "platewatch/table-1/alive"
+        assert wait_for(lambda: peak in heard and alive in heard, 5)
+        assert daemon.terminate() == 0
+        assert wait_for(lambda: heard[alive][-1]["state"] == "stopped", 5)
+        gateway.close()
+        listener.disconnect()
+        listener.loop_stop()
+    assert heard[alive][0]["state"] == "alive"
+    assert set(heard) == {peak, alive}
+    assert heard[peak][0].keys() >= {"at", "run", "now", "ahead", "alarm_limit_degC", "p_over"}
+    assert heard[peak][0]["inferred"] is True
+    assert heard[peak][0]["run"] == 1
