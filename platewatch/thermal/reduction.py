@@ -37,6 +37,8 @@ class ReducedModel:
 
     V (n, r) with V'C V = 1;  rates (r,) 1/s;  G (r, m);  g0 (r,)
     error_K: largest difference to the full model over a heat-up, measured when built
+    left_out_K: the part of it that the left-out modes cause; the rest is k(T) and cp(T)
+        at one temperature, and the coarse places of the losses
     basis_hash: gives a stored state its meaning
     """
 
@@ -46,6 +48,7 @@ class ReducedModel:
     g0: Array
     model: ThermalModel
     error_K: float
+    left_out_K: float
     basis_hash: str
     quadrature: Quadrature | None = field(repr=False)
 
@@ -80,13 +83,14 @@ def reduce(model: ThermalModel, order: int | None = None, tolerance_K: float = 0
     full = heat_up(model)
     for r in candidates:
         V, rates = _principal(model, basis[:, :r])
-        error = missed(model, V, rates, full)
-        if error <= tolerance_K:
+        left_out = missed(model, V, rates, full)
+        if left_out <= tolerance_K:
             break
     quadrature = build_quadrature(model, V)
+    error = left_out
     if quadrature is not None or not model.stack.is_constant:
         error += bend(model, V, rates, quadrature, full)
-    return _finished(model, V, rates, quadrature, error)
+    return _finished(model, V, rates, quadrature, error, left_out)
 
 
 def project(reduced: ReducedModel, T: Array) -> Array:
@@ -212,9 +216,14 @@ def _principal(model: ThermalModel, basis: Array) -> tuple[Array, Array]:
 
 
 def _finished(
-    model: ThermalModel, V: Array, rates: Array, quadrature: Quadrature | None, error_K: float
+    model: ThermalModel,
+    V: Array,
+    rates: Array,
+    quadrature: Quadrature | None,
+    error_K: float,
+    left_out_K: float,
 ) -> ReducedModel:
     digest = hashlib.sha256(V.tobytes())
     digest.update(rates.tobytes())
     G, g0 = V.T @ model.B, V.T @ model.offset
-    return ReducedModel(V, rates, G, g0, model, error_K, digest.hexdigest(), quadrature)
+    return ReducedModel(V, rates, G, g0, model, error_K, left_out_K, digest.hexdigest(), quadrature)
