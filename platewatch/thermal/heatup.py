@@ -20,41 +20,63 @@ STEPS = 4  # of each size
 
 @dataclass(frozen=True, eq=False)
 class HeatUp:
-    """All zones fully on at inputs u (m,), q (n,) W, from initial (n,) degC.
+    """All zones switched on at once, each reaching its watts with its own lag.
 
+    u (m,): final inputs;  lag_s (m,): 0 for a temperature;  initial (n,) degC
     dt (s,) steps and T (s, n) what the full linear model makes of them.
     """
 
     u: Array
-    q: Array
+    lag_s: Array
     initial: Array
     dt: Array
     T: Array
+
+    def at(self, t: float) -> Array:
+        """Inputs (m,) at the time t, s."""
+        return inputs_at(self.u, self.lag_s, t)
+
+
+def inputs_at(u: Array, lag_s: Array, t: float) -> Array:
+    """Final inputs u (m,), those with a lag on their way to it at the time t."""
+    slow = lag_s > 0
+    reached = u.copy()
+    reached[slow] *= -np.expm1(-t / lag_s[slow])
+    return reached
 
 
 def heat_up(model: ThermalModel) -> HeatUp:
     """From the mean ambient until the plate has taken up the heat of its reference."""
     ambients = [i.nominal for i in model.inputs if i.kind is InputKind.TEMPERATURE]
     ambient = float(np.mean(ambients)) if ambients else 22.0
-    u = input_vector(model, {zone.name: zone.watts for zone in model.plate.zones})
-    q = model.B @ u + model.offset
+    zones = model.plate.zones
+    u = input_vector(model, {zone.name: zone.watts for zone in zones})
+    lag_s = np.zeros(u.size)
+    lag_s[: len(zones)] = [zone.lag_s for zone in zones]
     initial = np.full(model.grid.n, ambient)
-    shortest = _end_s(model, u, initial) / (STEPS * (2**DOUBLINGS - 1))
-    T, fields, steps = initial, [], []
-    for doubling in range(DOUBLINGS):
-        factored = factor(model.capacity, model.K, shortest * 2**doubling)
+    dt = _end_s(model, u, initial) / (STEPS * (2**DOUBLINGS - 1))
+    t, T, fields, steps = 0.0, initial, [], []
+
+    def rate(t: float, T: Array) -> Array:
+        heat: Array = model.B @ inputs_at(u, lag_s, t) + model.offset - model.K @ T
+        return heat
+
+    for _ in range(DOUBLINGS):
+        factored = factor(model.capacity, model.K, dt)
         for _ in range(STEPS):
-            T = one_step(model.capacity, lambda _t, v: q - model.K @ v, factored, 0.0, T)[0]
+            T = one_step(model.capacity, rate, factored, t, T)[0]
+            t += dt
             fields.append(T)
-            steps.append(factored.dt)
-    return HeatUp(u, q, initial, np.array(steps), np.array(fields))
+            steps.append(dt)
+        dt *= 2
+    return HeatUp(u, lag_s, initial, np.array(steps), np.array(fields))
 
 
 def missed(model: ThermalModel, V: Array, rates: Array, full: HeatUp) -> float:
     """Largest difference, K, that leaving modes out makes; same steps, linear losses."""
-    drive = V.T @ full.q
+    G, g0 = V.T @ model.B, V.T @ model.offset
     a = V.T @ (model.capacity * full.initial)
-    states = _stepped(rates, full.dt, a, lambda v: drive - rates * v)
+    states = _stepped(rates, full.dt, a, lambda t, v: G @ full.at(t) + g0 - rates * v)
     return float(np.abs(states @ V.T - full.T).max())
 
 
@@ -68,18 +90,19 @@ def bend(
     """
     equations = FullEquations(model)
     a = V.T @ (model.capacity * full.initial)
-    drive = V.T @ full.q
+    G, g0 = V.T @ model.B, V.T @ model.offset
 
-    def by_full(v: Array) -> Array:
+    def by_full(t: float, v: Array) -> Array:
         T = V @ v
         capacity = equations.capacity(T)
-        heat = equations.rate(T, full.u)
+        heat = equations.rate(T, full.at(t))
         mass = V.T @ (capacity[:, None] * V)
         return np.asarray(np.linalg.solve(mass, V.T @ heat), dtype=np.float64)
 
-    def by_reduced(v: Array) -> Array:
-        extra = 0.0 if quadrature is None else quadrature.excess(v, full.u)
-        reduced: Array = drive - rates * v + extra
+    def by_reduced(t: float, v: Array) -> Array:
+        u = full.at(t)
+        extra = 0.0 if quadrature is None else quadrature.excess(v, u)
+        reduced: Array = G @ u + g0 - rates * v + extra
         return reduced
 
     true = _stepped(rates, full.dt, a, by_full)
@@ -87,13 +110,14 @@ def bend(
     return float(np.abs((true - ours) @ V.T).max())
 
 
-def _stepped(rates: Array, dt: Array, a: Array, slope: Callable[[Array], Array]) -> Array:
+def _stepped(rates: Array, dt: Array, a: Array, slope: Callable[[float, Array], Array]) -> Array:
     """States (s, r) after each step."""
-    states = []
+    states, t = [], 0.0
     ones = np.ones(rates.size)
-    for each in dt:
-        factored = Factored(float(each), partial(np.multiply, 1 / (1 / (GAMMA * each) + rates)))
-        a = one_step(ones, lambda _t, v: slope(v), factored, 0.0, a)[0]
+    for each in dt.tolist():
+        factored = Factored(each, partial(np.multiply, 1 / (1 / (GAMMA * each) + rates)))
+        a = one_step(ones, slope, factored, t, a)[0]
+        t += each
         states.append(a)
     return np.array(states)
 

@@ -99,10 +99,10 @@ def test_forty_modes_follow_the_full_model_through_a_heat_up(plate, tolerance_K,
 def test_the_order_follows_from_the_tolerance_and_the_error_is_stated():
     """A tighter tolerance takes more modes; the stated error keeps it."""
     model = model_of(round_plate())
-    rough, fine = reduce(model, tolerance_K=0.3), reduce(model, tolerance_K=0.08)
+    rough, fine = reduce(model, tolerance_K=0.3), reduce(model, tolerance_K=0.02)
     assert rough.order < fine.order
     assert rough.error_K <= 0.3
-    assert fine.error_K <= 0.08
+    assert fine.error_K <= 0.02
 
 
 PLACES = [(0.1, 0.1), (0.0, 0.0), (0.25, 0.15), (0.5, 0.0)]
