@@ -14,7 +14,6 @@ from skfem import (
     MeshQuad,
     solve,
 )
-from skfem.helpers import dot, grad
 from thin_plates import convective, held, material, mean_slope, model_of, plate, value
 
 from platewatch.thermal.conduction import ThermalModel, input_vector, steady, transient
@@ -169,7 +168,7 @@ def finite_elements() -> tuple[Basis, Array]:
 
     @BilinearForm
     def stiffness(u, v, _w):
-        return k * d * dot(grad(u), grad(v)) + loss * u * v
+        return k * d * (u.grad[0] * v.grad[0] + u.grad[1] * v.grad[1]) + loss * u * v
 
     @BilinearForm
     def rim_loss(u, v, _w):
