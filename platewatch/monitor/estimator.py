@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import shapely
 
-from platewatch.monitor.kalman import Innovation, predict, update
+from platewatch.monitor.kalman import Coupling, Innovation, predict_coupled, update
 from platewatch.monitor.tolerance import tolerance_K
 from platewatch.monitor.transition import Blocks, Continuous, Noise, Steps
 from platewatch.thermal.conduction import InputKind, conduction_matrix
@@ -127,10 +127,10 @@ class Observed:
     duty_heard: bool = True
 
 
-def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
-    """Bilinear hat functions of a coarse mesh over the plate: (n_cells, nb) in m2.
+def hats(grid: Grid, nodes: int) -> Array:
+    """Bilinear hat functions of a coarse mesh over the plate's bounding box: (cells, nodes).
 
-    They sum to each cell's area, so equal values are one uniform flux.
+    They sum to 1 in every cell.
     """
     width, height = np.ptp(grid.x) + grid.hx, np.ptp(grid.y) + grid.hy
     across = int(np.clip(round(np.sqrt(nodes * width / height)), 2, nodes // 2))
@@ -139,8 +139,12 @@ def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
     v = (grid.y - grid.y.min() + grid.hy / 2) / height * (along - 1)
     hats_x = np.clip(1 - np.abs(u[:, None] - np.arange(across)), 0, None)
     hats_y = np.clip(1 - np.abs(v[:, None] - np.arange(along)), 0, None)
-    hats = (hats_x[:, :, None] * hats_y[:, None, :]).reshape(grid.x.size, -1)
-    q = hats * grid.area[:, None]
+    return np.asarray((hats_x[:, :, None] * hats_y[:, None, :]).reshape(grid.x.size, -1))
+
+
+def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
+    """The coarse mesh as heat: (n_cells, nb) in m2; equal values are one uniform flux."""
+    q = hats(grid, nodes) * grid.area[:, None]
     return np.asarray(q[:, q.sum(0) > 1e-3 * grid.area.sum() / nodes])
 
 
@@ -288,17 +292,12 @@ def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
 def sensitivities(quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array) -> Array:
     """Modal heat (r, 3) per unit relative error of conductivity, losses, heat capacity,
     with the remainder of the losses as a fourth column."""
-    reduced, k = quiet.reduced, quiet.blocks
-    u = quiet.inputs(zone_W, around)
-    rest = remainder(reduced, a, u)
-    around_heat = reduced.G[:, list(quiet.around_u)] @ around
+    system = quiet.steps.system
+    rest = remainder(quiet.reduced, a, quiet.inputs(zone_W, around))
     spread = quiet.conduction @ a
-    lost = quiet.losses @ a - around_heat - reduced.g0 - rest
-    zone_heat = reduced.G[:, list(quiet.zone_u)] @ zone_W
-    bump_heat = quiet.steps.system.heat_bump @ bump
-    warming = zone_heat + bump_heat - spread - lost
-    assert warming.size == k.modes
-    return np.column_stack((-spread, -lost, -warming, rest))
+    lost = quiet.losses @ a - system.heat_around @ around - system.constant - rest
+    warming = system.heat_zone @ zone_W + system.heat_bump @ bump - spread - lost
+    return np.array((-spread, -lost, -warming, rest)).T
 
 
 def advance(
@@ -340,17 +339,21 @@ def forecast_step(
     mean = state.belief.mean
     delivered = state.heater_W + mean[k.d]
     S = sensitivities(quiet, mean[k.a], delivered, mean[k.b], around)
-    F = step.F.copy()
-    F[:, k.theta] += step.modal @ S[:, :3]
+    by_theta = step.modal @ S
     push = (
         step.heater @ state.heater_W
         + step.called @ called_W
         + step.around @ around
         + step.constant
-        + step.modal @ S[:, 3]
+        + by_theta[:, 3]
+    )
+    couplings = (
+        *step.couplings,
+        Coupling(k.a, k.theta, by_theta[k.a, :3]),
+        Coupling(k.L, k.theta, by_theta[k.L, :3]),
     )
     heater_W = step.decay * state.heater_W + (1 - step.decay) * called_W
-    return predict(state.belief, F, step.Q, push), heater_W
+    return predict_coupled(state.belief, step.keep, couplings, step.Q, push), heater_W
 
 
 def _condition(

@@ -121,6 +121,7 @@ class Pattern:
     error: Array | None
     sd: tuple[float, ...]
     shapes: tuple[Shape, ...]
+    spacing_m: float = 0.0
 
 
 def prior_rate(options: CauseOptions, cause: Cause) -> float:
@@ -146,8 +147,16 @@ def sources(quiet: Quiet) -> list[Pattern]:
             near = int(np.argmin((grid.x - x) ** 2 + (grid.y - y) ** 2))
             found.append(
                 Pattern(
-                    Family.SOURCE, quiet.cell_zone[near], x, y, side, heat / heat.sum(), None,
-                    (0.03 * watts, 0.3 * watts), SOURCE_SHAPES,
+                    Family.SOURCE,
+                    quiet.cell_zone[near],
+                    x,
+                    y,
+                    side,
+                    heat / heat.sum(),
+                    None,
+                    (0.03 * watts, 0.3 * watts),
+                    SOURCE_SHAPES,
+                    spacing * scale,
                 )
             )
     return found
@@ -184,8 +193,15 @@ def zones(quiet: Quiet) -> list[Pattern]:
         x, y = float(heat @ model.grid.x), float(heat @ model.grid.y)
         found.append(
             Pattern(
-                Family.ZONE, zone.name, x, y, 0.0, heat, None,
-                (0.1 * zone.watts, 0.5 * zone.watts), ZONE_SHAPES,
+                Family.ZONE,
+                zone.name,
+                x,
+                y,
+                0.0,
+                heat,
+                None,
+                (0.1 * zone.watts, 0.5 * zone.watts),
+                ZONE_SHAPES,
             )
         )
     return found
@@ -206,8 +222,15 @@ def losses(quiet: Quiet) -> list[Pattern]:
     }
     return [
         Pattern(
-            Family.LOSS, name, float(grid.x[part].mean()), float(grid.y[part].mean()), 0.0,
-            -lost * part, None, (0.15, 0.6), LOSS_SHAPES,
+            Family.LOSS,
+            name,
+            float(grid.x[part].mean()),
+            float(grid.y[part].mean()),
+            0.0,
+            -lost * part,
+            None,
+            (0.15, 0.6),
+            LOSS_SHAPES,
         )
         for name, part in halves.items()
     ]
@@ -222,8 +245,15 @@ def sensor_errors(quiet: Quiet) -> list[Pattern]:
         error[i] = 1.0
         found.append(
             Pattern(
-                Family.SENSOR, sensor.name, sensor.x_m, sensor.y_m, 0.0, None, error,
-                (3.0, 20.0), SENSOR_SHAPES,
+                Family.SENSOR,
+                sensor.name,
+                sensor.x_m,
+                sensor.y_m,
+                0.0,
+                None,
+                error,
+                (3.0, 20.0),
+                SENSOR_SHAPES,
             )
         )
     return found
@@ -245,9 +275,7 @@ def blocks(quiet: Quiet) -> list[Pattern]:
 
 def patterns(quiet: Quiet) -> list[Pattern]:
     """All of them, in a fixed order."""
-    return [
-        *sources(quiet), *zones(quiet), *losses(quiet), *sensor_errors(quiet), *blocks(quiet)
-    ]
+    return [*sources(quiet), *zones(quiet), *losses(quiet), *sensor_errors(quiet), *blocks(quiet)]
 
 
 def covers(grid: Grid, x_m: float, y_m: float) -> bool:

@@ -16,8 +16,8 @@ import numpy as np
 from scipy.special import log_ndtr
 
 from platewatch.monitor.causes.catalogue import Cause, cause_of, prior_rate
-from platewatch.monitor.causes.signatures import Bank, Float32
 from platewatch.monitor.causes.sentinel import Sentinel
+from platewatch.monitor.causes.signatures import Bank, Float32
 from platewatch.monitor.options import CauseOptions
 from platewatch.types import Array
 
@@ -52,12 +52,15 @@ def begin(bank: Bank, mean: Array, tick_s: float) -> Watch:
 
 def observe(
     sentinel: Sentinel, bank: Bank, watch: Watch, push: Array, residual_of: Array, tick_s: float
-) -> Watch:
-    """One tick: move the observer by push (n,), take in readings (m,), nan where missing."""
+) -> tuple[Watch, Array]:
+    """One tick: move the observer by push (n,), take in readings (m,), nan where missing.
+
+    Returns the whitened innovations (m,), too.
+    """
     prior = sentinel.F @ watch.mean + push
     residual = residual_of - sentinel.H @ prior
     residual = np.where(np.isfinite(residual), residual, 0.0)
-    v = (sentinel.whiten @ residual).astype(np.float32)
+    v = sentinel.whiten @ residual
     spacing = spacing_ticks(tick_s)
     b, rows, age = watch.b, watch.rows, watch.age + 1
     if rows == 0 or age >= spacing:
@@ -66,9 +69,9 @@ def observe(
         rows, age = min(rows + 1, len(b)), 0
     else:
         b = b.copy()
-    signature = bank.signature[age :: spacing][:rows]
-    b[: len(signature)] += np.matmul(signature, v)
-    return Watch(prior + sentinel.K @ residual, b, min(rows, len(signature)), age)
+    signature = bank.signature[age::spacing][:rows]
+    b[: len(signature)] += np.matmul(signature, v.astype(np.float32))
+    return Watch(prior + sentinel.K @ residual, b, min(rows, len(signature)), age), v
 
 
 @dataclass(frozen=True)
@@ -90,6 +93,13 @@ class Finding:
     x_m: float
     y_m: float
     log_odds: float
+
+
+def strongest(bank: Bank, watch: Watch, tick_s: float) -> float:
+    """The largest b^2 / (2 J) of all hypotheses: a cheap bound on every evidence."""
+    J = bank.energy[watch.age :: spacing_ticks(tick_s)][: watch.rows]
+    b = watch.b[: watch.rows]
+    return float((b * b / (2 * J + 1e-6)).max(initial=0.0))
 
 
 def log_evidence(bank: Bank, watch: Watch, tick_s: float) -> tuple[Array, Array, Array]:
@@ -144,8 +154,12 @@ def findings(
 
 
 def _finding(
-    bank: Bank, watch: Watch, J: Array, found: tuple[Cause, str, float, list[tuple[float, int, int]]],
-    probability: float, spacing: int,
+    bank: Bank,
+    watch: Watch,
+    J: Array,
+    found: tuple[Cause, str, float, list[tuple[float, int, int]]],
+    probability: float,
+    spacing: int,
 ) -> Finding:
     cause, subject, log_odds, best = found
     _, column, row = best[0]
@@ -153,14 +167,24 @@ def _finding(
     precision = pattern.sd[-1] ** -2.0
     total = J[row, column] + precision
     shares = np.exp(np.array([w for w, _, _ in best]) - best[0][0])
-    places = np.array([
-        (bank.patterns[bank.column_pattern[c]].x_m, bank.patterns[bank.column_pattern[c]].y_m)
-        for _, c, _ in best
-    ])
+    places = np.array(
+        [
+            (bank.patterns[bank.column_pattern[c]].x_m, bank.patterns[bank.column_pattern[c]].y_m)
+            for _, c, _ in best
+        ]
+    )
     x, y = shares @ places / shares.sum()
     return Finding(
-        cause, subject, probability, column, watch.age + row * spacing,
-        float(watch.b[row, column] / total), float(total**-0.5), float(x), float(y), log_odds,
+        cause,
+        subject,
+        probability,
+        column,
+        watch.age + row * spacing,
+        float(watch.b[row, column] / total),
+        float(total**-0.5),
+        float(x),
+        float(y),
+        log_odds,
     )
 
 
@@ -186,5 +210,3 @@ def _groups(
         )
         for key, hypotheses in members.items()
     }
-
-

@@ -2,7 +2,7 @@
 
 The true plate departs from the modelled one, the observer follows with its gain,
 and what is left over shows in the innovations: e' = F e + push, s = H e + direct,
-e = e' - K s.  Sources carry the ramped static correction of what the modes miss.
+e = e' - K s.  What the filter's modes miss of a source comes from the fuller model.
 """
 
 from __future__ import annotations
@@ -13,10 +13,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from platewatch.monitor.causes.catalogue import Pattern, Shape
+from platewatch.monitor.causes.fuller import Fuller, held
 from platewatch.monitor.causes.sentinel import Sentinel
 from platewatch.monitor.estimator import Quiet
-from platewatch.thermal.grid import point_row
-from platewatch.thermal.reduction import flux_modes, static_correction
+from platewatch.thermal.reduction import flux_modes
 from platewatch.types import Array
 
 WINDOW_S = 900.0
@@ -25,16 +25,19 @@ Float32 = NDArray[np.float32]
 
 @dataclass(frozen=True)
 class Push:
-    """How patterns enter: (n, P) state push per tick of unit heat, and what modes miss.
+    """How patterns enter, per unit amplitude.
 
-    corner (m, P): static correction at the sensors, K per W;  tau_s (P,) its rise
-    error (m, P): error of readings per unit
+    state (n, P): push of the state per tick;  error (m, P): error of readings
+    modal (r, P) watts into the filter's modes, full (K, P) into those of the fuller model
+    rows (m, r), full_rows (m, K): the field at the sensors in both
     """
 
     state: Array
-    corner: Array
-    tau_s: Array
     error: Array
+    modal: Array
+    full: Array
+    rows: Array
+    full_rows: Array
     lag_s: Array
     tick_s: float
 
@@ -45,7 +48,8 @@ class Bank:
 
     patterns (P) and shapes make the columns: pattern[c], shape[c]
     signature (ages, M, m): whitened innovations per unit amplitude
-    energy (ages, M): their squares, summed up to each age
+    energy (ages, M): their squares, summed up to each age;  scale_m: sqrt of the plate's area
+    root (m, m): turns whitened innovations back into K
     """
 
     patterns: tuple[Pattern, ...]
@@ -54,6 +58,8 @@ class Bank:
     signature: Float32
     energy: Float32
     push: Push
+    root: Array
+    scale_m: float
 
     @property
     def ages(self) -> int:
@@ -61,41 +67,60 @@ class Bank:
 
 
 def build_push(
-    quiet: Quiet, sentinel: Sentinel, patterns: list[Pattern], tick_us: int
+    quiet: Quiet,
+    sentinel: Sentinel,
+    fuller: Fuller,
+    patterns: list[Pattern],
+    tick_us: int,
 ) -> Push:
-    """Patterns in the coordinates of the observer."""
-    n, m, count = len(sentinel.F), len(sentinel.sensors), len(patterns)
-    state, corner = np.zeros((n, count)), np.zeros((m, count))
-    tau, error = np.ones(count), np.zeros((m, count))
-    step = quiet.steps.of(tick_us)
-    rows = np.array(
-        [point_row(quiet.grid, s.x_m, s.y_m) for s in quiet.plate.sensors]
-    )[list(sentinel.sensors)]
-    for p, pattern in enumerate(patterns):
-        if pattern.heat is not None:
-            state[:, p] = step.modal[:n] @ flux_modes(quiet.reduced, pattern.heat[:, None])[:, 0]
-            w, tau[p] = static_correction(quiet.reduced, pattern.heat)
-            corner[:, p] = rows @ w
-        if pattern.error is not None:
-            error[:, p] = pattern.error[list(sentinel.sensors)]
-    lags = quiet.steps.system.sensor_lag_s[list(sentinel.sensors)]
-    return Push(state, corner, tau, error, lags, tick_us / 1e6)
+    """Patterns in the coordinates of the observer and of the fuller model."""
+    cells, ns = quiet.grid.n, len(quiet.plate.sensors)
+    heat = np.column_stack([np.zeros(cells) if p.heat is None else p.heat for p in patterns])
+    error = np.column_stack([np.zeros(ns) if p.error is None else p.error for p in patterns])
+    listened = list(sentinel.sensors)
+    step, system = quiet.steps.of(tick_us), quiet.steps.system
+    modal = flux_modes(quiet.reduced, heat)
+    return Push(
+        state=step.modal[: len(sentinel.F)] @ modal,
+        error=error[listened],
+        modal=modal,
+        full=fuller.gain(heat),
+        rows=system.sensors[listened],
+        full_rows=fuller.at_sensors[listened],
+        lag_s=system.sensor_lag_s[listened],
+        tick_s=tick_us / 1e6,
+    )
 
 
-def pulse_responses(sentinel: Sentinel, push: Push, ages: int) -> Array:
-    """(ages, m, P) innovations after one tick of unit heat, or one reading in error."""
-    m, count = push.corner.shape
-    e = np.zeros((len(sentinel.F), count))
-    rise, below = np.zeros(count), np.zeros((m, count))
-    fade = np.exp(-push.tick_s / push.tau_s)
+def missed_pulse(quiet: Quiet, fuller: Fuller, push: Push, ages: int) -> Array:
+    """(ages, m, P) K at the sensors that the filter's modes miss, after one tick of heat."""
+    out = np.zeros((ages, push.rows.shape[0], push.modal.shape[1]))
+    t = np.arange(ages)[:, None] * push.tick_s
+    for rates, rows, gain, sign in (
+        (fuller.rates, push.full_rows, push.full, 1.0),
+        (quiet.reduced.rates, push.rows, push.modal, -1.0),
+    ):
+        _, rise = held(rates, push.tick_s)
+        fade = np.exp(-t * rates[None, :])
+        for i, row in enumerate(rows):
+            out[:, i] += sign * (fade * (row * rise)) @ gain
+    return out
+
+
+def pulse_responses(sentinel: Sentinel, push: Push, missed: Array) -> Array:
+    """(ages, m, P) innovations after one tick of unit heat, or one reading in error.
+
+    missed: from `missed_pulse`; it reaches the readings through their lag
+    """
+    ages, m, count = missed.shape
+    e, below = np.zeros((len(sentinel.F), count)), np.zeros((m, count))
     follow = np.exp(-push.tick_s / push.lag_s)[:, None]
     found = np.empty((ages, m, count))
     for age in range(ages):
         e = sentinel.F @ e
         if age == 0:
             e += push.state
-        rise = fade * rise + (1 - fade) * (age == 0)
-        below = follow * below + (1 - follow) * push.corner * rise
+        below = follow * below + (1 - follow) * missed[age]
         s = sentinel.H @ e + below
         if age == 0:
             s = s + push.error
@@ -131,11 +156,13 @@ def _filtered(pulse: Array, keep: float) -> Array:
     return out
 
 
-def build_bank(quiet: Quiet, sentinel: Sentinel, patterns: list[Pattern], tick_us: int) -> Bank:
+def build_bank(
+    quiet: Quiet, sentinel: Sentinel, fuller: Fuller, patterns: list[Pattern], tick_us: int
+) -> Bank:
     """All signatures over WINDOW_S (at least 60 ticks)."""
-    push = build_push(quiet, sentinel, patterns, tick_us)
+    push = build_push(quiet, sentinel, fuller, patterns, tick_us)
     ages = max(60, round(WINDOW_S / push.tick_s))
-    pulse = pulse_responses(sentinel, push, ages)
+    pulse = pulse_responses(sentinel, push, missed_pulse(quiet, fuller, push, ages))
     columns = [(p, shape) for p, pattern in enumerate(patterns) for shape in pattern.shapes]
     signature = np.empty((ages, len(columns), len(sentinel.sensors)), dtype=np.float32)
     for shape in {shape for _, shape in columns}:
@@ -151,4 +178,6 @@ def build_bank(quiet: Quiet, sentinel: Sentinel, patterns: list[Pattern], tick_u
         signature,
         energy,
         push,
+        np.linalg.inv(sentinel.whiten),
+        float(np.sqrt(quiet.grid.area.sum())),
     )
