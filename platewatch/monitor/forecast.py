@@ -11,17 +11,17 @@ from dataclasses import dataclass
 import numpy as np
 
 from platewatch.monitor.estimator import FieldState, Quiet, sensitivities
-from platewatch.monitor.loops import Loops
+from platewatch.monitor.loops import Controllers, Loops, LoopStart
 from platewatch.monitor.options import ForecastOptions
 from platewatch.monitor.peak import (
     MARGIN_SD,
     Hottest,
-    NDArrayBool,
     NDArrayInt,
     Places,
     candidates,
     most_common,
     square_root,
+    values_of,
 )
 from platewatch.monitor.transition import Step
 from platewatch.types import Array
@@ -29,20 +29,6 @@ from platewatch.types import Array
 DRAWS_AHEAD = 64
 REFRESH_S = 60.0  # the remainder of the losses is evaluated this often along the way
 NEAR_S = 60.0  # every step is looked at up to here, every third one beyond
-
-
-@dataclass(frozen=True)
-class LoopStart:
-    """What the controllers are doing now.
-
-    duty (nz,): 0..1 as logged;  integral (nz,): part of it that the error does not explain;
-    set_points (nz, steps): along the horizon;  live (nz,): loop and both are known
-    """
-
-    duty: Array
-    integral: Array
-    set_points: Array
-    live: NDArrayBool
 
 
 @dataclass(frozen=True)
@@ -72,6 +58,36 @@ def _spread_columns(Z: Array) -> NDArrayInt:
     return np.concatenate((np.arange(half), total + np.arange(half)))
 
 
+@dataclass(frozen=True)
+class _Stack:
+    """One step of field, controlled readings, heaters and calls, stacked as rows.
+
+    The rows of Z are [a (r), R (nz), p (nz), c (nz)]: modes, what each zone's control
+    thermocouple reads, heater output and watts called for.  The field takes its heat
+    from p and c (`heat`), else only decays (`keep`); `rest_of` picks the rows of a push.
+    """
+
+    keep: Array  # (r, 1)
+    heat: Array  # (r, 2 nz)
+    lower: Array  # (2 nz, r + 3 nz): the next R and p
+    rest_of: NDArrayInt
+
+
+def _stack(quiet: Quiet, loops: Loops, step: Step) -> _Stack:
+    k, nz = quiet.blocks, quiet.blocks.zones
+    junction = k.L.start + loops.sensor
+    lag = np.diag(step.keep[junction])
+    reading = (step.F[junction, k.a], lag, step.heater[junction], step.called[junction])
+    nothing = np.zeros((nz, k.modes + nz))
+    output = (nothing, np.diag(step.decay), np.diag(1 - step.decay))
+    return _Stack(
+        keep=step.keep[k.a][:, None],
+        heat=np.hstack((step.heater[k.a], step.called[k.a])),
+        lower=np.vstack((np.hstack(reading), np.hstack(output))),
+        rest_of=np.concatenate((np.arange(k.modes), junction)),
+    )
+
+
 def carry(
     quiet: Quiet,
     state: FieldState,
@@ -81,87 +97,87 @@ def carry(
     options: ForecastOptions,
 ) -> Path:
     """Carry the draws X (n, N) over the horizon."""
-    k = quiet.blocks
+    k, N = quiet.blocks, X.shape[1]
+    r, nz = k.modes, k.zones
     times = horizon_times(options)
     step = quiet.steps.of(round(options.step_s * 1e6), hold=True)
-    moving = np.r_[k.a, k.L]
-    F = np.ascontiguousarray(step.F[np.ix_(moving, moving)])
-    held = step.F[moving][:, np.r_[k.d, k.b]] @ X[np.r_[k.d, k.b]]
-    held += (step.around @ state.around + step.constant)[moving][:, None]
-    heater, called = step.heater[moving], step.called[moving]
-    y = X[moving]
-    p = np.repeat(state.heater_W[:, None], X.shape[1], axis=1)
-    control = loops.sensor.astype(np.int64)
+    stack = _stack(quiet, loops, step)
+    control = loops.sensor
     beta = X[k.beta][control]
-    integral = np.repeat(start.integral[:, None], X.shape[1], axis=1)
-    live = (start.live & (loops.closed > 0))[:, None]
-    duty_now = np.repeat(start.duty[:, None], X.shape[1], axis=1)
-    before = y[k.modes + control] + beta
-    looks, modes, asked = [0.0], [y[: k.modes].copy()], [state.called_W]
+    Z = np.empty((r + 3 * nz, N))
+    a, R, p, c = np.split(Z, (r, r + nz, r + 2 * nz))
+    a[:], R[:], p[:] = X[k.a], X[k.L][control] + beta, state.heater_W[:, None]
+    held = _held_push(quiet, state, step, stack, X)
+    held[r:] += (1 - step.keep[k.L][control])[:, None] * beta
+    controllers = Controllers(loops, start, R, options.step_s)
+    looked_at = _looks(times)
+    modes, asked = np.empty((looked_at.size + 1, r, N)), np.empty((looked_at.size + 1, nz))
+    modes[0], asked[0] = a, state.called_W
+    keep, even = np.repeat(stack.keep, N, axis=1), np.full(N, 1 / N)
+    heated, below, look = np.empty((r, N)), np.empty((2 * nz, N)), 1
     rest = held
     refresh = max(1, round(REFRESH_S / options.step_s))
-    for i, t in enumerate(times):
+    for i in range(times.size):
         if i % refresh == 0:
-            rest = held + _modal_heat(quiet, state, step, y, p, X)[moving]
-        reading = y[k.modes + control] + beta
-        error = start.set_points[:, i][:, None] - reading
-        error = np.where(live, error, 0.0)
-        wanted = loops.duty_for(error, integral, (reading - before) / options.step_s)
-        integral = loops.next_integral(error, integral, wanted, options.step_s)
-        duty = np.where(live, np.clip(wanted, loops.low[:, None], loops.high[:, None]), duty_now)
-        before = reading
-        c = loops.watts(duty)
-        y = F @ y + heater @ p + called @ c + rest
-        p = step.decay[:, None] * p + (1 - step.decay)[:, None] * c
-        if t <= NEAR_S or (i + 1) % 3 == 0 or i + 1 == times.size:
-            looks.append(float(t))
-            modes.append(y[: k.modes])
-            asked.append(c.mean(axis=1))
-    return Path(np.array(looks), np.array(modes), np.array(asked))
+            rest = held + _modal_heat(quiet, state, step, stack, a, p, X)
+        c[:] = controllers.called_W(R, start.set_points[:, i])
+        np.dot(stack.lower, Z, out=below)
+        np.dot(stack.heat, Z[r + nz :], out=heated)
+        a *= keep
+        a += heated
+        a += rest[:r]
+        Z[r : r + 2 * nz] = below
+        R += rest[r:]
+        if look <= looked_at.size and looked_at[look - 1] == i:
+            modes[look], asked[look] = a, c @ even
+            look += 1
+    return Path(np.concatenate(([0.0], times[looked_at])), modes, asked)
 
 
-def _modal_heat(quiet: Quiet, state: FieldState, step: Step, y: Array, p: Array, X: Array) -> Array:
-    """(n, N) push over one step of the losses' remainder and of each draw's theta."""
+def _looks(times: Array) -> NDArrayInt:
+    """Steps whose fields are kept: all of the first minute, every third one, the last."""
+    number = np.arange(times.size)
+    kept = (times <= NEAR_S) | ((number + 1) % 3 == 0) | (number + 1 == times.size)
+    return np.flatnonzero(kept)
+
+
+def _held_push(quiet: Quiet, state: FieldState, step: Step, stack: _Stack, X: Array) -> Array:
+    """(r + nz, N) push of everything that is held over the horizon."""
+    disturbed = slice(quiet.blocks.d.start, quiet.blocks.b.stop)
+    held = step.F[stack.rest_of, disturbed] @ X[disturbed]
+    held += (step.around @ state.around + step.constant)[stack.rest_of][:, None]
+    return held
+
+
+def _modal_heat(
+    quiet: Quiet, state: FieldState, step: Step, stack: _Stack, a: Array, p: Array, X: Array
+) -> Array:
+    """(r + nz, N) push over one step of the losses' remainder and of each draw's theta."""
     k = quiet.blocks
-    S = sensitivities(
-        quiet,
-        y[: k.modes].mean(axis=1),
-        p.mean(axis=1) + X[k.d].mean(axis=1),
-        X[k.b].mean(axis=1),
-        state.around,
-    )
-    return np.asarray(step.modal @ (S[:, :3] @ X[k.theta] + S[:, 3][:, None]))
+    even = np.full(X.shape[1], 1 / X.shape[1])
+    delivered = p @ even + state.belief.mean[k.d]
+    S = sensitivities(quiet, a @ even, delivered, state.belief.mean[k.b], state.around)
+    push = (step.modal @ S)[stack.rest_of]
+    return np.asarray(push[:, :3] @ X[k.theta] + push[:, 3][:, None])
 
 
 def hottest_ahead(quiet: Quiet, where: Places, path: Path, region: str) -> tuple[Hottest, Array]:
     """The coming peak of a region, and the maximum of each draw at each look (looks, N)."""
-    V = quiet.reduced.V
-    means = path.modes.mean(axis=2)
-    fields = V @ means.T
-    cells = _cells_ahead(where, V, path, fields, region)
-    count, r, n = path.modes.shape
-    flat = path.modes.transpose(1, 0, 2).reshape(r, count * n)
-    values = (V[cells] @ flat).reshape(cells.size, count, n)
-    tops = values.max(axis=0)
+    place, N = where.regions[region], path.modes.shape[2]
+    means = path.modes @ np.full(N, 1 / N)
+    fields = means @ place.rows.T
+    spread = path.modes - means[:, :, None]
+    hottest = place.rows[fields.argmax(axis=1)]
+    margins = MARGIN_SD * np.matmul(hottest[:, None, :], spread)[:, 0, :].std(axis=1) + 0.1
+    found = candidates(place, fields, margins)
+    base, values = values_of(place, found, fields, spread)
+    tops = values.max(axis=1)
     when = tops.argmax(axis=0)
-    draw = np.arange(n)
-    at_cell = cells[values[:, when, draw].argmax(axis=0)]
-    samples = tops[when, draw]
-    return (
-        Hottest(samples, most_common(at_cell), float(np.median(path.times_s[when]))),
-        np.asarray(tops),
-    )
-
-
-def _cells_ahead(where: Places, V: Array, path: Path, fields: Array, region: str) -> NDArrayInt:
-    """Candidate cells over the whole horizon."""
-    found = []
-    for look in range(path.times_s.size):
-        inside = np.where(where.regions[region], fields[:, look], -np.inf)
-        top = int(inside.argmax())
-        margin = MARGIN_SD * float((V[top] @ path.modes[look]).std()) + 0.1
-        found.append(candidates(where, fields[:, look], margin, region))
-    return np.unique(np.concatenate(found))
+    draw = np.arange(N)
+    cells = place.cells[found[values[when, :, draw].argmax(axis=1)]]
+    samples = base + tops[when, draw].astype(np.float64)
+    at_s = float(np.median(path.times_s[when]))
+    return Hottest(samples, most_common(cells), at_s), base + tops.astype(np.float64)
 
 
 def crossing_times(times_s: Array, tops: Array, limit: float) -> Array:

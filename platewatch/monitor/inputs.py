@@ -150,8 +150,8 @@ def _sensors(
             interval[i] = _interval_us(interval[i], spacing)
         degC[i], seen[i] = values[-1], stamps[-1]
         middle = sum(s - tick.at_us for s in stamps) / len(stamps)
-        share = float(np.clip(1 + middle / tick.dt_us, 0.0, 1.0))
-        found.append((i, float(np.mean(values)), len(values), share))
+        share = min(max(1 + middle / tick.dt_us, 0.0), 1.0)
+        found.append((i, sum(values) / len(values), len(values), share))
     heard = replace(
         heard,
         degC=degC,

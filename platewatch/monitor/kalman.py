@@ -5,10 +5,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import cho_factor, cho_solve
+from scipy.linalg.lapack import dpotrf, dpotrs
 
 from platewatch.errors import ShapeError
 from platewatch.types import Array, Gaussian
+
+LOG_2PI = float(np.log(2 * np.pi))
 
 
 @dataclass(frozen=True)
@@ -34,6 +36,40 @@ def predict(posterior: Gaussian, F: Array, Q: Array, push: Array | float = 0.0) 
     cov += cov.T
     cov *= 0.5
     return Gaussian(F @ posterior.mean + push, cov)
+
+
+@dataclass(frozen=True)
+class Coupling:
+    """Part of a transition: weights (rows, columns) by which some states move others."""
+
+    rows: slice
+    columns: slice
+    weights: Array
+
+
+def predict_coupled(
+    posterior: Gaussian,
+    keep: Array,
+    couplings: tuple[Coupling, ...],
+    Q: Array,
+    push: Array | float = 0.0,
+) -> Gaussian:
+    """`predict` for F = diag(keep) + couplings, at a fraction of the dense product's work.
+
+    keep (n,): share of each state that stays in it
+    """
+    P, m = posterior.cov, posterior.mean
+    mean, FP = keep * m, keep[:, None] * P
+    for c in couplings:
+        mean[c.rows] += c.weights @ m[c.columns]
+        FP[c.rows] += c.weights @ P[c.columns]
+    cov = FP * keep
+    for c in couplings:
+        cov[:, c.rows] += FP[:, c.columns] @ c.weights.T
+    cov += Q
+    cov += cov.T
+    cov *= 0.5
+    return Gaussian(mean + push, cov)
 
 
 def update(
@@ -70,11 +106,13 @@ def update(
         return prior, Innovation(names, z, np.zeros((0, 0)), 0.0, 0.0)
     HP = H @ prior.cov
     S = HP @ H.T
-    S[np.diag_indices(m)] += R
-    factor = cho_factor(S, lower=True, check_finite=False)
+    S.ravel()[:: m + 1] += R
+    factor, failed = dpotrf(S, lower=1)
+    if failed:
+        raise np.linalg.LinAlgError("the covariance of the readings is not positive definite")
     residual = z - (H @ prior.mean if expected is None else expected)
-    whitened = cho_solve(factor, residual, check_finite=False)
-    K = cho_solve(factor, HP, check_finite=False).T
+    weighed = dpotrs(factor, residual, lower=1)[0]
+    K = np.ascontiguousarray(dpotrs(factor, HP, lower=1)[0].T)
     if considered is not None:
         K[considered] = 0.0
     W = prior.cov - K @ HP
@@ -82,8 +120,8 @@ def update(
     cov += (K * R) @ K.T
     cov += cov.T
     cov *= 0.5
-    nis = float(residual @ whitened)
-    log_det = 2.0 * float(np.log(np.diag(factor[0])).sum())
-    log_likelihood = -0.5 * (nis + log_det + m * float(np.log(2 * np.pi)))
+    nis = float(residual @ weighed)
+    log_det = 2.0 * float(np.log(factor.ravel()[:: m + 1]).sum())
+    log_likelihood = -0.5 * (nis + log_det + m * LOG_2PI)
     posterior = Gaussian(prior.mean + K @ residual, cov)
     return posterior, Innovation(names, residual, S, nis, log_likelihood)

@@ -5,11 +5,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from platewatch.monitor.recipe import Do, Recipe
 from platewatch.thermal.plate import DutyLaw, Loop, LoopForm, Plate, Zone
 from platewatch.types import Array
 
+BoolArray = NDArray[np.bool_]
 AT_LIMIT = 1e-3  # a duty this near to its limit is at it
 RAMP_MATCH = 0.15  # a set-point slope within 15 % of a recipe's rate is that ramp
 
@@ -38,6 +40,7 @@ class Loops:
 
     gain duty/K, integral_s (inf: none), derivative_s, low, high: (nz,)
     sensor (nz,): index of the controlling thermocouple, 0 where there is none
+    full_W (nz, 1): watts at full duty;  linear: every zone delivers its duty as it is
     """
 
     zones: tuple[Zone, ...]
@@ -47,28 +50,17 @@ class Loops:
     derivative_s: Array
     low: Array
     high: Array
-    sensor: Array
+    sensor: NDArray[np.int64]
+    full_W: Array
+    linear: bool
 
     def watts(self, duty: Array) -> Array:
         """(nz, N) duty to (nz, N) watts called for."""
+        if self.linear:
+            return duty * self.full_W
         return np.array(
             [z.watts * delivered_share(z, d) for z, d in zip(self.zones, duty, strict=True)]
         )
-
-    def duty_for(self, error_K: Array, integral: Array, slope_K_s: Array) -> Array:
-        """Output (nz, N) before limits: gain * error + integral - derivative part."""
-        column = self.gain[:, None]
-        return np.asarray(
-            column * error_K + integral - column * self.derivative_s[:, None] * slope_K_s
-        )
-
-    def next_integral(self, error_K: Array, integral: Array, wanted: Array, dt_s: float) -> Array:
-        """Integrate, except where that would push further past a limit (anti-windup)."""
-        stuck = ((wanted >= self.high[:, None]) & (error_K > 0)) | (
-            (wanted <= self.low[:, None]) & (error_K < 0)
-        )
-        rate = self.gain[:, None] * error_K / self.integral_s[:, None]
-        return np.asarray(integral + np.where(stuck, 0.0, rate) * dt_s)
 
     def follow(self, integral: Array, duty: Array, error_K: Array, dt_s: float) -> Array:
         """The integral part (nz,) with which the controllers come to ask for `duty`.
@@ -81,10 +73,16 @@ class Loops:
         direct = duty - self.gain * error_K
         known = np.where(np.isnan(integral), np.clip(direct, self.low, self.high), integral)
         wanted = self.gain * error_K + known
-        moved = self.next_integral(error_K[:, None], known[:, None], wanted[:, None], dt_s)[:, 0]
+        stuck = _beyond(wanted, error_K, self.low, self.high)
+        moved = known + np.where(stuck, 0.0, self.gain * error_K / self.integral_s) * dt_s
         at_high, at_low = duty >= self.high - AT_LIMIT, duty <= self.low + AT_LIMIT
         held = np.where(at_high, np.maximum(moved, direct), np.minimum(moved, direct))
         return np.where(at_high | at_low, held, direct)
+
+
+def _beyond(wanted: Array, error: Array, low: Array, high: Array) -> BoolArray:
+    """Where integrating would push an output further past its limit (anti-windup)."""
+    return np.asarray(((wanted >= high) & (error > 0)) | ((wanted <= low) & (error < 0)))
 
 
 def _ideal(loop: Loop) -> tuple[float, float, float]:
@@ -108,7 +106,75 @@ def build_loops(plate: Plate) -> Loops:
             gain, ti, td = _ideal(loop)
             rows.append((1.0, gain, ti, td, loop.low, loop.high, float(names.index(loop.sensor))))
     table = np.array(rows).reshape(len(plate.zones), 7).T
-    return Loops(plate.zones, *table)
+    full_W = np.array([[zone.watts] for zone in plate.zones]).reshape(-1, 1)
+    linear = all(zone.duty_law in (DutyLaw.LINEAR, DutyLaw.BURST) for zone in plate.zones)
+    return Loops(
+        plate.zones,
+        closed=table[0],
+        gain=table[1],
+        integral_s=table[2],
+        derivative_s=table[3],
+        low=table[4],
+        high=table[5],
+        sensor=table[6].astype(np.int64),
+        full_W=full_W,
+        linear=linear,
+    )
+
+
+@dataclass(frozen=True)
+class LoopStart:
+    """What the controllers are doing now.
+
+    duty (nz,): 0..1 as logged;  integral (nz,): part of it that the error does not explain;
+    set_points (nz, steps): along the horizon;  live (nz,): loop and both are known
+    """
+
+    duty: Array
+    integral: Array
+    set_points: Array
+    live: BoolArray
+
+
+class Controllers:
+    """All controllers over many draws at once, step by step; owned by one forecast.
+
+    Zones whose loop is open, or not known well enough, keep their duty.
+    """
+
+    def __init__(self, loops: Loops, start: LoopStart, reading: Array, step_s: float) -> None:
+        shape = reading.shape
+        live = start.live & (loops.closed > 0)
+
+        def wide(values: Array) -> Array:
+            """(nz, N): arithmetic on equal shapes is far quicker than on broadcast ones."""
+            return np.repeat(values[:, None], shape[1], axis=1)
+
+        self._loops = loops
+        self._gain = wide(np.where(live, loops.gain, 0.0))
+        self._rate = self._gain * wide(step_s / loops.integral_s)
+        self._slope = -self._gain * wide(loops.derivative_s / step_s)
+        self._has_slope = bool(self._slope.any())
+        self._low = wide(np.where(live, loops.low, -np.inf))
+        self._high = wide(np.where(live, loops.high, np.inf))
+        self._least_high, self._most_low = float(self._high.min()), float(self._low.max())
+        self._integral = wide(np.where(live, start.integral, start.duty))
+        self._before = reading.copy()
+
+    def called_W(self, reading: Array, set_point: Array) -> Array:
+        """Watts called for (nz, N) over the next step."""
+        error = set_point[:, None] - reading
+        wanted = self._gain * error
+        wanted += self._integral
+        if self._has_slope:
+            wanted += self._slope * (reading - self._before)
+            self._before[:] = reading
+        if wanted.max() < self._least_high and wanted.min() > self._most_low:
+            self._integral += self._rate * error
+            return self._loops.watts(wanted)
+        stuck = _beyond(wanted, error, self._low, self._high)
+        self._integral += self._rate * np.where(stuck, 0.0, error)
+        return self._loops.watts(np.minimum(np.maximum(wanted, self._low), self._high))
 
 
 def set_points_ahead(

@@ -9,13 +9,16 @@ and a replay is exact.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import cholesky
+from scipy.linalg.lapack import dpotrf
 from scipy.special import ndtr
 
+from platewatch.errors import PlateError
 from platewatch.monitor.estimator import Quiet
+from platewatch.thermal.grid import Grid
 from platewatch.types import Array, Gaussian
 
 DRAWS = 256
@@ -25,7 +28,7 @@ MARGIN_SD = 6.0
 WHOLE_PLATE = ""
 
 NDArrayInt = NDArray[np.int64]
-NDArrayBool = NDArray[np.bool_]
+Short = NDArray[np.float32]
 
 
 def standard_draws(size: int, count: int = DRAWS) -> Array:
@@ -36,52 +39,100 @@ def standard_draws(size: int, count: int = DRAWS) -> Array:
 
 def square_root(cov: Array) -> Array:
     """Lower Cholesky factor of a covariance that may be singular to rounding."""
-    scale = float(np.mean(np.diag(cov))) or 1.0
+    n = len(cov)
+    diagonal = cov.ravel()[:: n + 1] if cov.flags.c_contiguous else np.diag(cov)
+    scale = float(diagonal.sum()) / n or 1.0
     for jitter in (1e-13, 1e-11, 1e-9, 1e-7):
-        try:
-            return np.asarray(
-                cholesky(cov + jitter * scale * np.eye(len(cov)), lower=True, check_finite=False)
-            )
-        except np.linalg.LinAlgError:
-            continue
+        shifted = cov.copy()
+        shifted.ravel()[:: n + 1] += jitter * scale
+        factor, failed = dpotrf(shifted.T, lower=1, clean=1)
+        if not failed:
+            return np.asarray(factor)
     raise np.linalg.LinAlgError("the covariance of the state is not positive definite")
 
 
 @dataclass(frozen=True)
-class Places:
-    """Where on the plate maxima are looked for.
+class Region:
+    """Part of the plate in which a maximum is looked for, cut into blocks of cells.
 
-    blocks (nb, 16): cells of each block, padded by repeating its first
-    regions: zone name (or WHOLE_PLATE) to a mask over cells
+    cells (m,): its cells, block after block;  rows (m, r): their temperatures from modes
+    short_rows: the same in single precision
+    starts (nb,): where each block begins;  blocks (nb, 16): positions in `cells`, padded
+    by repeating the first
     """
 
+    cells: NDArrayInt
+    rows: Array
+    short_rows: Short
+    starts: NDArrayInt
     blocks: NDArrayInt
-    regions: dict[str, NDArrayBool]
+
+
+@dataclass(frozen=True)
+class Places:
+    """Where on the plate maxima are looked for: by zone name, or WHOLE_PLATE."""
+
+    regions: dict[str, Region]
 
 
 def places(quiet: Quiet, zones: tuple[str, ...] = ()) -> Places:
-    """The blocks of candidate cells, and a mask for each zone that a limit names."""
-    grid = quiet.grid
+    """The whole plate, and each zone that a limit names.
+
+    Raises PlateError for a zone too small to hold a cell.
+    """
+    names = np.array(quiet.cell_zone)
+    key = _block_of(quiet.grid)
+    regions = {WHOLE_PLATE: _region(quiet, key, np.arange(names.size))}
+    for zone in zones:
+        cells = np.flatnonzero(names == zone)
+        if not cells.size:
+            raise PlateError(f"zone {zone!r} is nearest to no cell; choose a smaller cell_mm")
+        regions[zone] = _region(quiet, key, cells)
+    return Places(regions)
+
+
+def _block_of(grid: Grid) -> NDArrayInt:
+    """Number of the block that each cell lies in."""
     column = np.floor((grid.x - grid.x.min()) / grid.hx + 1e-6).astype(np.int64) // BLOCK_CELLS
     row = np.floor((grid.y - grid.y.min()) / grid.hy + 1e-6).astype(np.int64) // BLOCK_CELLS
-    key = row * (column.max() + 1) + column
-    groups = [np.flatnonzero(key == value) for value in np.unique(key)]
-    most = max(group.size for group in groups)
-    blocks = np.array([np.pad(g, (0, most - g.size), mode="edge") for g in groups])
-    names = np.array(quiet.cell_zone)
-    regions = {WHOLE_PLATE: np.ones(names.size, dtype=np.bool_)}
-    regions |= {zone: names == zone for zone in zones}
-    return Places(blocks, regions)
+    return np.asarray(row * (column.max() + 1) + column)
 
 
-def candidates(where: Places, mean_field: Array, margin_K: float, region: str) -> NDArrayInt:
-    """Cells that may hold the maximum: the hottest of each block, within the margin."""
-    inside = np.where(where.regions[region], mean_field, -np.inf)
-    values = inside[where.blocks]
-    best = values.argmax(axis=1)
-    hottest = values[np.arange(len(best)), best]
-    keep = hottest >= hottest.max() - margin_K
-    return np.asarray(where.blocks[np.arange(len(best)), best][keep])
+def _region(quiet: Quiet, key: NDArrayInt, members: NDArrayInt) -> Region:
+    cells = members[np.argsort(key[members], kind="stable")]
+    _, starts, counts = np.unique(key[cells], return_index=True, return_counts=True)
+    inside = np.arange(counts.max())
+    blocks = starts[:, None] + np.where(inside < counts[:, None], inside, 0)
+    rows = np.ascontiguousarray(quiet.reduced.V[cells])
+    return Region(cells, rows, rows.astype(np.float32), starts, blocks)
+
+
+def candidates(region: Region, fields: Array, margin_K: Array) -> NDArrayInt:
+    """Positions in `region.cells` of what may hold the maximum of some field: the hottest
+    cell of each block, where it comes within the margin of the hottest of all.
+
+    fields (looks, m): mean temperatures of the region's cells;  margin_K (looks,)
+    """
+    hottest = np.maximum.reduceat(fields, region.starts, axis=1)
+    near = hottest >= (hottest.max(axis=1) - margin_K)[:, None]
+    look, block = np.nonzero(near)
+    inside = region.blocks[block]
+    best = fields[look[:, None], inside].argmax(axis=1)
+    return np.unique(inside[np.arange(best.size), best])
+
+
+def values_of(
+    region: Region, found: NDArrayInt, fields: Array, spread: Array
+) -> tuple[float, Short]:
+    """Temperatures of some cells in every draw: a base, and (looks, cells, draws) above it.
+
+    fields (looks, m) mean temperatures;  spread (looks, r, draws) modes beyond their mean
+    Single precision serves for differences to the hottest: near it they round to 1e-6 K.
+    """
+    base = float(fields.max())
+    values = np.matmul(region.short_rows[found], spread.astype(np.float32))
+    values += (fields[:, found] - base).astype(np.float32)[:, :, None]
+    return base, values
 
 
 @dataclass(frozen=True)
@@ -96,36 +147,42 @@ class Hottest:
     cell: int
     at_s: float = 0.0
 
-    @property
+    @cached_property
     def degC(self) -> float:
         return float(self.samples.mean())
 
-    @property
+    @cached_property
     def sd_K(self) -> float:
         return float(self.samples.std())
 
+    @cached_property
+    def ordered(self) -> Array:
+        return np.sort(self.samples)
+
     def quantile(self, p: float) -> float:
-        return float(np.quantile(self.samples, p))
+        """Linear between the ordered samples."""
+        position = p * (self.ordered.size - 1)
+        below = min(int(position), self.ordered.size - 2)
+        low, high = self.ordered[below], self.ordered[below + 1]
+        return float(low + (position - below) * (high - low))
 
 
 def most_common(cells: NDArrayInt) -> int:
     """The cell that occurs most often; the lower number where two tie."""
-    values, counts = np.unique(cells, return_counts=True)
-    return int(values[counts.argmax()])
+    return int(np.bincount(cells).argmax())
 
 
 def hottest_now(quiet: Quiet, where: Places, belief: Gaussian, Z: Array, region: str) -> Hottest:
     """The present maximum of a region.  Z (n, draws) from `standard_draws`."""
-    a = quiet.blocks.a
-    V = quiet.reduced.V
-    spread = square_root(belief.cov[a, a]) @ Z[a]
-    mean_field = V @ belief.mean[a]
-    inside = np.where(where.regions[region], mean_field, -np.inf)
-    top = int(inside.argmax())
-    margin = MARGIN_SD * float((V[top] @ spread).std()) + 0.1
-    cells = candidates(where, mean_field, margin, region)
-    values = mean_field[cells][:, None] + V[cells] @ spread
-    return Hottest(values.max(axis=0), most_common(cells[values.argmax(axis=0)]))
+    k, place = quiet.blocks.a, where.regions[region]
+    spread = square_root(belief.cov[k, k]) @ Z[k]
+    field = place.rows @ belief.mean[k]
+    margin = MARGIN_SD * float((place.rows[field.argmax()] @ spread).std()) + 0.1
+    found = candidates(place, field[None], np.array([margin]))
+    base, values = values_of(place, found, field[None], spread[None])
+    best = values[0].argmax(axis=0)
+    samples = base + values[0, best, np.arange(best.size)].astype(np.float64)
+    return Hottest(samples, most_common(place.cells[found[best]]))
 
 
 def probability_over(samples: Array, limit: float) -> float:

@@ -25,7 +25,6 @@ from platewatch.monitor.estimator import (
     restarted,
 )
 from platewatch.monitor.forecast import (
-    LoopStart,
     carry,
     crossing_times,
     horizon_times,
@@ -35,7 +34,7 @@ from platewatch.monitor.forecast import (
 )
 from platewatch.monitor.inputs import Heard, nothing_heard, take_in
 from platewatch.monitor.limits import AlarmLimit, LimitKind
-from platewatch.monitor.loops import Loops, set_points_ahead
+from platewatch.monitor.loops import Loops, LoopStart, set_points_ahead
 from platewatch.monitor.options import EstimatorOptions, ForecastOptions
 from platewatch.monitor.peak import WHOLE_PLATE, Hottest, Places, hottest_now, probability_over
 from platewatch.monitor.recipe import Recipe
@@ -246,7 +245,7 @@ def _forecast_due(monitor: Monitor, state: State, tick: Tick) -> bool:
 
 def _errors_K(monitor: Monitor, heard: Heard) -> Array:
     """(nz,) set-point minus reading of each loop; nan where loop, reading or duty is not known."""
-    error = heard.set_point - heard.degC[monitor.loops.sensor.astype(np.int64)]
+    error = heard.set_point - heard.degC[monitor.loops.sensor]
     return np.where(np.isfinite(heard.duty) & (monitor.loops.closed > 0), error, np.nan)
 
 

@@ -21,6 +21,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from scipy.linalg import expm
 
+from platewatch.monitor.kalman import Coupling
 from platewatch.types import Array
 
 
@@ -89,11 +90,13 @@ class Continuous:
 class Step:
     """x' = F x + E e (+ noise of covariance Q);  p' = decay p + (1 - decay) c.
 
-    E is split by what drives: heater (n, nz) from p, called (n, nz) from c,
-    around (n, nu), constant (n,), modal (n, r).
+    F = diag(keep) + couplings.  E is split by what drives: heater (n, nz) from p,
+    called (n, nz) from c, around (n, nu), constant (n,), modal (n, r).
     """
 
     F: Array
+    keep: Array
+    couplings: tuple[Coupling, ...]
     Q: Array
     heater: Array
     called: Array
@@ -161,8 +164,11 @@ def exact_step(system: Continuous, dt_s: float, hold: bool = False) -> Step:
     big[k.a, one] = system.constant
     big[k.a, m] = np.eye(r)
     E = expm(big * dt_s)[:n]
+    F = np.ascontiguousarray(E[:, :n])
     return Step(
-        F=np.ascontiguousarray(E[:, :n]),
+        F=F,
+        keep=np.diag(F).copy(),
+        couplings=_couplings(k, F),
         Q=_van_loan(A, _intensities(system), dt_s),
         heater=np.ascontiguousarray(E[:, p]),
         called=np.ascontiguousarray(E[:, c]),
@@ -170,6 +176,16 @@ def exact_step(system: Continuous, dt_s: float, hold: bool = False) -> Step:
         constant=np.ascontiguousarray(E[:, one]),
         modal=np.ascontiguousarray(E[:, m]),
         decay=np.exp(-dt_s / system.heater_lag_s),
+    )
+
+
+def _couplings(k: Blocks, F: Array) -> tuple[Coupling, ...]:
+    """What of F is not diagonal: disturbances heat the field, the field warms junctions."""
+    disturbed = slice(k.d.start, k.b.stop)
+    warming = slice(k.a.start, k.b.stop)
+    return tuple(
+        Coupling(rows, columns, np.ascontiguousarray(F[rows, columns]))
+        for rows, columns in ((k.a, disturbed), (k.L, warming))
     )
 
 

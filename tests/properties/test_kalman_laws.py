@@ -6,7 +6,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from platewatch.errors import ShapeError
-from platewatch.monitor.kalman import predict, update
+from platewatch.monitor.kalman import Coupling, predict, predict_coupled, update
 from platewatch.types import Gaussian
 
 sizes = st.tuples(st.integers(1, 8), st.integers(0, 6), st.integers(0, 2**32 - 1))
@@ -70,6 +70,32 @@ def test_a_step_keeps_a_covariance_symmetric_and_positive(size, decay):
     for cov in (moved.cov, posterior.cov):
         assert np.array_equal(cov, cov.T)
         assert np.linalg.eigvalsh(cov).min() > -1e-12 * np.abs(cov).max()
+
+
+@given(st.integers(0, 2**32 - 1))
+def test_a_step_by_its_couplings_is_the_dense_step(seed):
+    """F = diag(keep) + couplings, overlapping or not: the same belief to rounding."""
+    rng = np.random.default_rng(seed)
+    prior, _, _, _ = case(9, 0, seed)
+    keep, Q, push = rng.random(9), np.diag(rng.random(9)), rng.random(9)
+    couplings = (
+        Coupling(slice(0, 4), slice(4, 6), rng.normal(0, 1, (4, 2))),
+        Coupling(slice(6, 8), slice(0, 6), rng.normal(0, 1, (2, 6))),
+        Coupling(slice(0, 4), slice(8, 9), rng.normal(0, 1, (4, 1))),
+    )
+    F = np.diag(keep)
+    for c in couplings:
+        F[c.rows, c.columns] += c.weights
+    dense, quick = predict(prior, F, Q, push), predict_coupled(prior, keep, couplings, Q, push)
+    assert quick.mean == pytest.approx(dense.mean, rel=1e-12, abs=1e-9)
+    assert quick.cov == pytest.approx(dense.cov, rel=1e-12, abs=1e-11 * np.abs(dense.cov).max())
+    assert np.array_equal(quick.cov, quick.cov.T)
+
+
+def test_readings_that_contradict_their_own_covariance_are_refused():
+    """A covariance that is none is our own mistake: no belief is made from it."""
+    with pytest.raises(np.linalg.LinAlgError, match="not positive definite"):
+        update(Gaussian(np.zeros(1), -np.eye(1)), np.zeros(1), np.eye(1), np.array([0.5]))
 
 
 def many_steps(steps, R_least):

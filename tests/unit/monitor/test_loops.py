@@ -4,7 +4,13 @@ import numpy as np
 import pytest
 from scipy.integrate import quad
 
-from platewatch.monitor.loops import build_loops, delivered_share, set_points_ahead
+from platewatch.monitor.loops import (
+    Controllers,
+    LoopStart,
+    build_loops,
+    delivered_share,
+    set_points_ahead,
+)
 from platewatch.monitor.recipe import Do, Recipe, Step
 from platewatch.thermal.plate import DutyLaw, Loop, LoopForm, Rectangle, Sensor, Zone
 
@@ -63,17 +69,13 @@ def test_watts_are_called_for_by_zone():
 
 
 def emulated(loop, set_point, readings, dt_s, start_duty=0.0):
-    """The outputs of a loop over a series of readings."""
+    """The outputs of a loop over a series of readings, as shares of its 400 W."""
     loops = build_loops(PlateOf(zone(loop=loop)))
-    integral = np.array([[start_duty - loops.gain[0] * (set_point - readings[0])]])
-    before, duties = readings[0], []
-    for reading in readings:
-        error, slope = np.array([[set_point - reading]]), np.array([[(reading - before) / dt_s]])
-        wanted = loops.duty_for(error, integral, slope)
-        integral = loops.next_integral(error, integral, wanted, dt_s)
-        before = reading
-        duties.append(float(np.clip(wanted, loops.low[0], loops.high[0])[0, 0]))
-    return np.array(duties)
+    integral = np.array([start_duty - loops.gain[0] * (set_point - readings[0])])
+    start = LoopStart(np.array([start_duty]), integral, np.empty((1, 0)), np.array([True]))
+    controllers = Controllers(loops, start, np.array([[readings[0]]]), dt_s)
+    watts = [controllers.called_W(np.array([[r]]), np.array([set_point])) for r in readings]
+    return np.array(watts).ravel() / 400.0
 
 
 def test_a_loop_is_emulated_as_an_independent_discretisation_of_it():
@@ -107,12 +109,46 @@ def test_a_loop_at_its_limit_does_not_wind_up():
 
 
 def test_a_loop_at_its_limit_still_integrates_the_other_way():
-    """Anti-windup stops the integral only in the direction of the limit."""
+    """Anti-windup stops the integral only in the direction of the limit: at full duty with
+    the plate 1 K too hot it comes down, 0.08 * 1 K * 10 s / 600 s a step."""
     loops = build_loops(PlateOf(zone(loop=Loop("A", 0.08, 600.0))))
-    error, wanted = np.array([[5.0, -5.0]]), np.array([[1.4, 1.4]])
-    moved = loops.next_integral(error, np.zeros((1, 2)), wanted, 10.0)
-    assert moved[0, 0] == 0.0
-    assert moved[0, 1] == pytest.approx(-0.08 * 5 * 10 / 600)
+    start = LoopStart(np.ones(1), np.array([1.4]), np.empty((1, 0)), np.array([True]))
+    controllers = Controllers(loops, start, np.array([[121.0]]), 10.0)
+    warm, cold = np.array([[121.0]]), np.array([[119.0]])
+    for _ in range(300):  # 1.4 - 0.08 - 300 * 0.08 / 60 is 0.92
+        controllers.called_W(warm, np.array([120.0]))
+    assert controllers.called_W(warm, np.array([120.0])) == pytest.approx(np.array([[368.0]]))
+    for _ in range(300):
+        controllers.called_W(cold, np.array([120.0]))
+    # Unwound by one step at once: it was never taken beyond the limit.
+    assert controllers.called_W(warm, np.array([120.0]))[0, 0] < 400.0
+
+
+def test_a_loop_that_is_not_known_keeps_its_duty():
+    """No set-point heard: the duty is held, whatever the reading does, within no limits."""
+    loops = build_loops(PlateOf(zone(loop=Loop("A", 0.08, 600.0, low=0.2)), zone()))
+    start = LoopStart(np.array([0.1, 0.7]), np.zeros(2), np.empty((2, 0)), np.array([False, True]))
+    controllers = Controllers(loops, start, np.full((2, 3), 100.0), 10.0)
+    for reading in (100.0, 150.0, 20.0):
+        watts = controllers.called_W(np.full((2, 3), reading), np.zeros(2))
+        assert watts == pytest.approx(np.array([[40.0] * 3, [280.0] * 3]))
+
+
+def test_many_draws_are_controlled_each_by_its_own_reading():
+    """Some at a limit and some not: every column as if alone."""
+    loop, readings = Loop("A", 0.08, 600.0, 20.0), np.linspace(100.0, 130.0, 7)
+    loops = build_loops(PlateOf(zone(loop=loop)))
+    start = LoopStart(np.array([0.5]), np.array([0.4]), np.empty((1, 0)), np.array([True]))
+    together = Controllers(loops, start, readings[None], 10.0)
+    alone = [Controllers(loops, start, np.array([[r]]), 10.0) for r in readings]
+    for step in range(40):
+        moved = readings + 3 * np.sin(step / 5.0)
+        watts = together.called_W(moved[None], np.array([118.0]))[0]
+        each = [
+            c.called_W(np.array([[r]]), np.array([118.0]))[0, 0]
+            for c, r in zip(alone, moved, strict=True)
+        ]
+        assert watts == pytest.approx(np.array(each), abs=1e-9)
 
 
 def test_a_series_loop_is_turned_into_the_ideal_form():
