@@ -41,10 +41,21 @@ def wait_for(truth: Callable[[], object], within_s: float) -> bool:
 
 def rows(record: Path, table: str) -> list[tuple[object, ...]]:
     """What a table holds, in order of time."""
-    with sqlite3.connect(record) as connection:
-        found = connection.execute(f"SELECT {TABLES[table]} FROM {table} ORDER BY at_us").fetchall()
-    connection.close()
-    return found
+    connection = sqlite3.connect(record)
+    try:
+        query = f"SELECT {TABLES[table]} FROM {table} ORDER BY at_us"
+        return connection.execute(query).fetchall()
+    finally:
+        connection.close()
+
+
+def backlog(record: Path) -> list[int]:
+    """When readings that came as history were taken."""
+    connection = sqlite3.connect(record)
+    try:
+        return [row[0] for row in connection.execute("SELECT at_us FROM reading WHERE flags & 4")]
+    finally:
+        connection.close()
 
 
 def count(record: Path, table: str, where: str = "1") -> int:
