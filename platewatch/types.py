@@ -42,7 +42,7 @@ class Reading:
 
     @property
     def usable(self) -> bool:
-        return not self.flags & ~USABLE
+        return self.flags == 0 or not self.flags & ~USABLE  # most are 0, and quickly told
 
 
 @dataclass(frozen=True, slots=True)

@@ -64,13 +64,15 @@ class _Stack:
 
     The rows of Z are [a (r), R (nz), p (nz), c (nz)]: modes, what each zone's control
     thermocouple reads, heater output and watts called for.  The field takes its heat
-    from p and c (`heat`), else only decays (`keep`); `rest_of` picks the rows of a push.
+    from p and c (`heat`), else only decays (`keep`).  `rest_of` picks the rows of a push,
+    `modal` (r + nz, r) are those of modal heat.
     """
 
     keep: Array  # (r, 1)
     heat: Array  # (r, 2 nz)
     lower: Array  # (2 nz, r + 3 nz): the next R and p
     rest_of: NDArrayInt
+    modal: Array
 
 
 def _stack(quiet: Quiet, loops: Loops, step: Step) -> _Stack:
@@ -80,11 +82,13 @@ def _stack(quiet: Quiet, loops: Loops, step: Step) -> _Stack:
     reading = (step.F[junction, k.a], lag, step.heater[junction], step.called[junction])
     nothing = np.zeros((nz, k.modes + nz))
     output = (nothing, np.diag(step.decay), np.diag(1 - step.decay))
+    rest_of = np.concatenate((np.arange(k.modes), junction))
     return _Stack(
         keep=step.keep[k.a][:, None],
         heat=np.hstack((step.heater[k.a], step.called[k.a])),
         lower=np.vstack((np.hstack(reading), np.hstack(output))),
-        rest_of=np.concatenate((np.arange(k.modes), junction)),
+        rest_of=rest_of,
+        modal=step.modal[rest_of],
     )
 
 
@@ -119,7 +123,7 @@ def carry(
     refresh = max(1, round(REFRESH_S / options.step_s))
     for i in range(times.size):
         if i % refresh == 0:
-            rest = held + _modal_heat(quiet, state, step, stack, a, p, X)
+            rest = held + _modal_heat(quiet, state, stack, a, p, X)
         c[:] = controllers.called_W(R, start.set_points[:, i])
         np.dot(stack.lower, Z, out=below)
         np.dot(stack.heat, Z[r + nz :], out=heated)
@@ -150,14 +154,14 @@ def _held_push(quiet: Quiet, state: FieldState, step: Step, stack: _Stack, X: Ar
 
 
 def _modal_heat(
-    quiet: Quiet, state: FieldState, step: Step, stack: _Stack, a: Array, p: Array, X: Array
+    quiet: Quiet, state: FieldState, stack: _Stack, a: Array, p: Array, X: Array
 ) -> Array:
     """(r + nz, N) push over one step of the losses' remainder and of each draw's theta."""
     k = quiet.blocks
     even = np.full(X.shape[1], 1 / X.shape[1])
     delivered = p @ even + state.belief.mean[k.d]
     S = sensitivities(quiet, a @ even, delivered, state.belief.mean[k.b], state.around)
-    push = (step.modal @ S)[stack.rest_of]
+    push = stack.modal @ S
     return np.asarray(push[:, :3] @ X[k.theta] + push[:, 3][:, None])
 
 
@@ -170,7 +174,7 @@ def hottest_ahead(quiet: Quiet, where: Places, path: Path, region: str) -> tuple
     hottest = place.rows[fields.argmax(axis=1)]
     margins = MARGIN_SD * np.matmul(hottest[:, None, :], spread)[:, 0, :].std(axis=1) + 0.1
     found = candidates(place, fields, margins)
-    base, values = values_of(place, found, fields, spread)
+    base, values = values_of(place, found, means, spread)
     tops = values.max(axis=1)
     when = tops.argmax(axis=0)
     draw = np.arange(N)

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from platewatch.monitor.estimator import Observed, Quiet
 from platewatch.monitor.loops import delivered_share
 from platewatch.monitor.signals import to_degC
+from platewatch.thermal.plate import Zone
 from platewatch.types import Array, Reading, Tick
 from platewatch.units import TemperatureUnit
 from platewatch.units import to_degC as unit_to_degC
@@ -79,33 +80,39 @@ def take_in(
     for reading in tick.readings:
         if reading.usable:
             by_channel.setdefault(reading.channel, []).append(reading)
-    heard = _surroundings(quiet, heard, by_channel, unit)
-    around = heard.around
-    heard, sensors = _sensors(quiet, heard, tick, by_channel)
-    called, heard = _duties(quiet, heard, tick, by_channel)
-    heard = replace(heard, set_points=_set_points(quiet, heard, by_channel, unit))
-    share = np.array([_share_of_watts(quiet, i, d) for i, d in enumerate(heard.duty)])
+    around, junctions = _surroundings(quiet, heard, by_channel, unit)
+    last, sensors = _sensors(quiet, heard, tick, by_channel, junctions)
+    duty, called, called_end = _duties(quiet, heard, tick, by_channel)
+    heard = Heard(
+        degC=last.degC,
+        sensor_us=tuple(last.sensor_us),
+        interval_us=tuple(last.interval_us),
+        duty=duty,
+        set_points=_set_points(quiet, heard, by_channel, unit),
+        around=around,
+        raw_trouble=tuple(last.trouble),
+        junctions=junctions,
+    )
     return heard, Observed(
         sensors=tuple(s[0] for s in sensors),
         degC=np.array([s[1] for s in sensors]),
         count=np.array([s[2] for s in sensors], dtype=np.float64),
         share=np.array([s[3] for s in sensors]),
         called_W=called,
-        called_end_W=share,
+        called_end_W=called_end,
         around=around,
-        duty_heard=not bool(np.isnan(heard.duty).any()),
+        duty_heard=not bool(np.isnan(duty).any()),
     )
 
 
-def _share_of_watts(quiet: Quiet, zone: int, duty: float) -> float:
+def _share_of_watts(zone: Zone, duty: float) -> float:
     """Watts called for at a duty of 0..1; none where the duty was never heard."""
-    z = quiet.plate.zones[zone]
-    return 0.0 if np.isnan(duty) else float(z.watts * delivered_share(z, duty))
+    return 0.0 if duty != duty else float(zone.watts * delivered_share(zone, duty))
 
 
 def _surroundings(
     quiet: Quiet, heard: Heard, readings: dict[str, list[Reading]], unit: TemperatureUnit
-) -> Heard:
+) -> tuple[Array, Mapping[str, float]]:
     """Room and terminal blocks: each holds until it is heard again."""
     new = {
         name: unit_to_degC(rows[-1].value, unit)
@@ -113,11 +120,19 @@ def _surroundings(
         if name.startswith("surround/")
     }
     if not new:
-        return heard
-    around = np.array(
-        [new.get(n, old) for n, old in zip(quiet.around_names, heard.around, strict=True)]
-    )
-    return replace(heard, around=around, junctions={**heard.junctions, **new})
+        return heard.around, heard.junctions
+    around = [new.get(n, old) for n, old in zip(quiet.around_names, heard.around, strict=True)]
+    return np.array(around), {**heard.junctions, **new}
+
+
+@dataclass
+class _Last:
+    """What the thermocouples said last, while a tick is gone through."""
+
+    degC: Array
+    sensor_us: list[int]
+    interval_us: list[int]
+    trouble: list[str]
 
 
 def _sensors(
@@ -125,41 +140,36 @@ def _sensors(
     heard: Heard,
     tick: Tick,
     readings: dict[str, list[Reading]],
-) -> tuple[Heard, list[tuple[int, float, int, float]]]:
+    junctions: Mapping[str, float],
+) -> tuple[_Last, list[tuple[int, float, int, float]]]:
     """(sensor, mean degC, how many, share of the tick) for each sensor that spoke."""
-    degC, seen = heard.degC.copy(), list(heard.sensor_us)
-    interval, trouble = list(heard.interval_us), list(heard.raw_trouble)
+    last = _Last(
+        heard.degC.copy(),
+        list(heard.sensor_us),
+        list(heard.interval_us),
+        list(heard.raw_trouble),
+    )
     found = []
     for i, sensor in enumerate(quiet.plate.sensors):
         values, stamps = [], []
+        junction = sensor.cold_junction
+        terminals = junctions.get(junction) if isinstance(junction, str) else None
         for r in readings.get(f"sensor/{sensor.name}", ()):
-            junction = sensor.cold_junction
-            signal = to_degC(
-                sensor,
-                r.value,
-                heard.junctions.get(junction) if isinstance(junction, str) else None,
-            )
-            trouble[i] = signal.reason
+            signal = to_degC(sensor, r.value, terminals)
+            last.trouble[i] = signal.reason
             if signal.degC is not None:
                 values.append(signal.degC)
                 stamps.append(r.at_us)
         if not values:
             continue
-        if seen[i]:
-            spacing = (stamps[-1] - seen[i]) // len(stamps)
-            interval[i] = _interval_us(interval[i], spacing)
-        degC[i], seen[i] = values[-1], stamps[-1]
+        if last.sensor_us[i]:
+            spacing = (stamps[-1] - last.sensor_us[i]) // len(stamps)
+            last.interval_us[i] = _interval_us(last.interval_us[i], spacing)
+        last.degC[i], last.sensor_us[i] = values[-1], stamps[-1]
         middle = sum(s - tick.at_us for s in stamps) / len(stamps)
         share = min(max(1 + middle / tick.dt_us, 0.0), 1.0)
         found.append((i, sum(values) / len(values), len(values), share))
-    heard = replace(
-        heard,
-        degC=degC,
-        sensor_us=tuple(seen),
-        interval_us=tuple(interval),
-        raw_trouble=tuple(trouble),
-    )
-    return heard, found
+    return last, found
 
 
 def _interval_us(before: int, spacing: int) -> int:
@@ -171,34 +181,37 @@ def _interval_us(before: int, spacing: int) -> int:
 
 def _duties(
     quiet: Quiet, heard: Heard, tick: Tick, readings: dict[str, list[Reading]]
-) -> tuple[Array, Heard]:
-    """Mean watts called for over the tick; a duty holds from its stamp to the next."""
-    duty = heard.duty.copy()
-    called = np.zeros(duty.size)
+) -> tuple[Array, Array, Array]:
+    """Last duties, mean watts called for over the tick and watts called for at its end; a
+    duty holds from its stamp to the next."""
+    duty: list[float] = heard.duty.tolist()
+    mean, end = [], []
     for i, zone in enumerate(quiet.plate.zones):
         since, spent = tick.at_us - tick.dt_us, 0.0
+        watts = _share_of_watts(zone, duty[i])
         for r in readings.get(f"zone/{zone.name}/duty", ()):
             value = r.value / zone.duty_full
             if not 0.0 <= value <= DUTY_SLACK:
                 continue
-            spent += _share_of_watts(quiet, i, duty[i]) * (r.at_us - since)
+            spent += watts * (r.at_us - since)
             since, duty[i] = r.at_us, min(value, 1.0)
-        spent += _share_of_watts(quiet, i, duty[i]) * (tick.at_us - since)
-        called[i] = spent / tick.dt_us
-    return called, replace(heard, duty=duty)
+            watts = _share_of_watts(zone, duty[i])
+        mean.append((spent + watts * (tick.at_us - since)) / tick.dt_us)
+        end.append(watts)
+    return np.array(duty), np.array(mean), np.array(end)
 
 
 def _set_points(
     quiet: Quiet, heard: Heard, readings: dict[str, list[Reading]], unit: TemperatureUnit
 ) -> tuple[tuple[tuple[int, float], ...], ...]:
     kept = []
-    for zone, old in zip(quiet.plate.zones, heard.set_points, strict=True):
-        points = list(old)
+    for zone, points in zip(quiet.plate.zones, heard.set_points, strict=True):
         for r in readings.get(f"zone/{zone.name}/setpoint", ()):
             if len(points) >= 2 and r.at_us - points[-2][0] < POINT_SPACING_US:
-                points.pop()
-            points.append((r.at_us, unit_to_degC(r.value, unit)))
-        if points:
-            points = [p for p in points if points[-1][0] - p[0] <= SLOPE_SPAN_US]
-        kept.append(tuple(points))
+                points = points[:-1]
+            points = (*points, (r.at_us, unit_to_degC(r.value, unit)))
+        old = 0
+        while points and points[-1][0] - points[old][0] > SLOPE_SPAN_US:
+            old += 1
+        kept.append(points[old:])
     return tuple(kept)

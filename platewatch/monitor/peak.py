@@ -57,15 +57,14 @@ class Region:
 
     cells (m,): its cells, block after block;  rows (m, r): their temperatures from modes
     short_rows: the same in single precision
-    starts (nb,): where each block begins;  blocks (nb, 16): positions in `cells`, padded
-    by repeating the first
+    starts, sizes (nb,): where each block begins, and how many cells it has
     """
 
     cells: NDArrayInt
     rows: Array
     short_rows: Short
     starts: NDArrayInt
-    blocks: NDArrayInt
+    sizes: NDArrayInt
 
 
 @dataclass(frozen=True)
@@ -100,11 +99,9 @@ def _block_of(grid: Grid) -> NDArrayInt:
 
 def _region(quiet: Quiet, key: NDArrayInt, members: NDArrayInt) -> Region:
     cells = members[np.argsort(key[members], kind="stable")]
-    _, starts, counts = np.unique(key[cells], return_index=True, return_counts=True)
-    inside = np.arange(counts.max())
-    blocks = starts[:, None] + np.where(inside < counts[:, None], inside, 0)
+    _, starts, sizes = np.unique(key[cells], return_index=True, return_counts=True)
     rows = np.ascontiguousarray(quiet.reduced.V[cells])
-    return Region(cells, rows, rows.astype(np.float32), starts, blocks)
+    return Region(cells, rows, rows.astype(np.float32), starts, sizes)
 
 
 def candidates(region: Region, fields: Array, margin_K: Array) -> NDArrayInt:
@@ -114,24 +111,24 @@ def candidates(region: Region, fields: Array, margin_K: Array) -> NDArrayInt:
     fields (looks, m): mean temperatures of the region's cells;  margin_K (looks,)
     """
     hottest = np.maximum.reduceat(fields, region.starts, axis=1)
-    near = hottest >= (hottest.max(axis=1) - margin_K)[:, None]
-    look, block = np.nonzero(near)
-    inside = region.blocks[block]
-    best = fields[look[:, None], inside].argmax(axis=1)
-    return np.unique(inside[np.arange(best.size), best])
+    least = (hottest.max(axis=1) - margin_K)[:, None]
+    bar = np.where(hottest >= least, hottest, np.inf)
+    found = (fields >= np.repeat(bar, region.sizes, axis=1)).any(axis=0)
+    return np.flatnonzero(found)
 
 
 def values_of(
-    region: Region, found: NDArrayInt, fields: Array, spread: Array
+    region: Region, found: NDArrayInt, means: Array, spread: Array
 ) -> tuple[float, Short]:
     """Temperatures of some cells in every draw: a base, and (looks, cells, draws) above it.
 
-    fields (looks, m) mean temperatures;  spread (looks, r, draws) modes beyond their mean
+    means (looks, r) modes;  spread (looks, r, draws) modes beyond their mean
     Single precision serves for differences to the hottest: near it they round to 1e-6 K.
     """
+    fields = means @ region.rows[found].T
     base = float(fields.max())
     values = np.matmul(region.short_rows[found], spread.astype(np.float32))
-    values += (fields[:, found] - base).astype(np.float32)[:, :, None]
+    values += (fields - base).astype(np.float32)[:, :, None]
     return base, values
 
 
@@ -176,10 +173,11 @@ def hottest_now(quiet: Quiet, where: Places, belief: Gaussian, Z: Array, region:
     """The present maximum of a region.  Z (n, draws) from `standard_draws`."""
     k, place = quiet.blocks.a, where.regions[region]
     spread = square_root(belief.cov[k, k]) @ Z[k]
-    field = place.rows @ belief.mean[k]
+    mean = belief.mean[k]
+    field = place.rows @ mean
     margin = MARGIN_SD * float((place.rows[field.argmax()] @ spread).std()) + 0.1
     found = candidates(place, field[None], np.array([margin]))
-    base, values = values_of(place, found, field[None], spread[None])
+    base, values = values_of(place, found, mean[None], spread[None])
     best = values[0].argmax(axis=0)
     samples = base + values[0, best, np.arange(best.size)].astype(np.float64)
     return Hottest(samples, most_common(place.cells[found[best]]))

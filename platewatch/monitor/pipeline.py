@@ -311,8 +311,8 @@ def _conditions(
     words = monitor.words
     shown = monitor.shown_limit
     near = shown is not None and now[WHOLE_PLATE].degC > shown.value - NEAR_LIMIT_K
-    silent_us = tick.at_us - state.silent_since_us
-    found = [ask.picture_blind(words, silent_us, _blind_after_us(state), near)]
+    silent_us, after_us = tick.at_us - state.silent_since_us, _blind_after_us(state)
+    found = [ask.picture_blind(words, silent_us, after_us, near)]
     if state.blind or state.ahead is None:
         return found
     for limit in monitor.peak_limits:
@@ -321,9 +321,12 @@ def _conditions(
             found += [ask.peak_coming(words, estimate), ask.peak_now(words, estimate)]
     for limit in ask.sensor_limits(monitor.limits):
         for i, sensor in enumerate(monitor.quiet.plate.sensors):
-            fresh = tick.at_us - state.heard.sensor_us[i] <= _blind_after_us(state)
-            if limit.sensor in ("", sensor.name) and fresh and not limit.record_only:
-                reading = float(state.heard.degC[i])
+            fresh = tick.at_us - state.heard.sensor_us[i] <= after_us
+            if limit.sensor not in ("", sensor.name) or not fresh or limit.record_only:
+                continue
+            reading = float(state.heard.degC[i])
+            # Far below, with no alarm standing, there is nothing to judge.
+            if reading >= limit.value - limit.deadband or ("peak-now", sensor.name) in state.alarms:
                 found.append(ask.sensor_over(words, limit, sensor.name, reading))
     return found
 
