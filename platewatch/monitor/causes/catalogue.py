@@ -181,7 +181,7 @@ def _square(grid: Grid, x: float, y: float, side: float) -> Array:
 def _overlap(centre: Array, width: float, at: float, side: float) -> Array:
     low = np.maximum(centre - width / 2, at - side / 2)
     high = np.minimum(centre + width / 2, at + side / 2)
-    return np.clip(high - low, 0.0, None)
+    return np.asarray(np.clip(high - low, 0.0, None))
 
 
 def zones(quiet: Quiet) -> list[Pattern]:

@@ -14,7 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.linalg import eigh
 
-from platewatch.monitor.estimator import Quiet, hats
+from platewatch.monitor.estimator import Quiet
+from platewatch.thermal.grid import hats
 from platewatch.types import Array
 
 NODES = 600

@@ -191,7 +191,8 @@ def second_look(model: Model, bank: Bank, found: list[Finding], seen: Array) -> 
 def _varied(leading: list[Finding]) -> list[Finding]:
     """The leaders, but no more than two of one family at a time come first."""
     count: dict[Family, int] = {}
-    first, later = [], []
+    first: list[Finding] = []
+    later: list[Finding] = []
     for finding in leading:
         family = FAMILY_OF[finding.cause]
         count[family] = count.get(family, 0) + 1

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from platewatch.monitor.causes.catalogue import Pattern, Shape
+from platewatch.monitor.causes.catalogue import Family, Pattern, Shape
 from platewatch.monitor.causes.fuller import Fuller, held
 from platewatch.monitor.causes.sentinel import Sentinel
 from platewatch.monitor.estimator import Quiet
@@ -28,7 +28,9 @@ class Push:
     """How patterns enter, per unit amplitude.
 
     state (n, P): push of the state per tick;  error (m, P): error of readings
-    modal (r, P) watts into the filter's modes, full (K, P) into those of the fuller model
+    modal (r, P) watts into the filter's modes
+    full (K, P), shadow (r, P): watts into both sets of modes where the filter's may miss
+    something; none for heaters, which the filter's modes were made for
     rows (m, r), full_rows (m, K): the field at the sensors in both
     """
 
@@ -36,6 +38,7 @@ class Push:
     error: Array
     modal: Array
     full: Array
+    shadow: Array
     rows: Array
     full_rows: Array
     lag_s: Array
@@ -77,6 +80,7 @@ def build_push(
     cells, ns = quiet.grid.n, len(quiet.plate.sensors)
     heat = np.column_stack([np.zeros(cells) if p.heat is None else p.heat for p in patterns])
     error = np.column_stack([np.zeros(ns) if p.error is None else p.error for p in patterns])
+    undeclared = np.array([float(p.family is not Family.ZONE) for p in patterns])
     listened = list(sentinel.sensors)
     step, system = quiet.steps.of(tick_us), quiet.steps.system
     modal = flux_modes(quiet.reduced, heat)
@@ -84,7 +88,8 @@ def build_push(
         state=step.modal[: len(sentinel.F)] @ modal,
         error=error[listened],
         modal=modal,
-        full=fuller.gain(heat),
+        full=fuller.gain(heat * undeclared),
+        shadow=modal * undeclared,
         rows=system.sensors[listened],
         full_rows=fuller.at_sensors[listened],
         lag_s=system.sensor_lag_s[listened],
@@ -98,7 +103,7 @@ def missed_pulse(quiet: Quiet, fuller: Fuller, push: Push, ages: int) -> Array:
     t = np.arange(ages)[:, None] * push.tick_s
     for rates, rows, gain, sign in (
         (fuller.rates, push.full_rows, push.full, 1.0),
-        (quiet.reduced.rates, push.rows, push.modal, -1.0),
+        (quiet.reduced.rates, push.rows, push.shadow, -1.0),
     ):
         _, rise = held(rates, push.tick_s)
         fade = np.exp(-t * rates[None, :])
@@ -178,6 +183,6 @@ def build_bank(
         signature,
         energy,
         push,
-        np.linalg.inv(sentinel.whiten),
+        np.asarray(np.linalg.inv(sentinel.whiten), dtype=np.float64),
         float(np.sqrt(quiet.grid.area.sum())),
     )

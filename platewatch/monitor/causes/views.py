@@ -54,12 +54,12 @@ class View:
 class Course:
     """One fit's heat and reading errors over time since its onset.
 
-    full (ticks, K), modal (ticks, r): heat into both sets of modes;  state (ticks, n);
+    full (ticks, K), shadow (ticks, r): heat into both sets of modes;  state (ticks, n);
     error (ticks, m)
     """
 
     full: Array
-    modal: Array
+    shadow: Array
     state: Array
     error: Array
 
@@ -70,7 +70,7 @@ def course(bank: Bank, f: Fit) -> Course:
     values = _shape_values(bank, f.columns, f.age + 1) * f.amplitude
     return Course(
         values @ push.full[:, which].T,
-        values @ push.modal[:, which].T,
+        values @ push.shadow[:, which].T,
         values @ push.state[:, which].T,
         values @ push.error[:, which].T,
     )
@@ -98,12 +98,12 @@ def departure(
     follow = np.exp(-push.tick_s / push.lag_s)
     e, below = np.zeros(len(sentinel.F)), np.zeros(len(sentinel.sensors))
     y, a = np.zeros(fuller.rates.size), np.zeros(decay.size)
-    warms = bool(c.modal.any())
+    warms = bool(c.shadow.any())
     for k in range(len(c.state)):
         e = sentinel.F @ e + c.state[k]
         if warms:
             y = full_decay * y + full_rise * c.full[k]
-            a = decay * a + rise * c.modal[k]
+            a = decay * a + rise * c.shadow[k]
             missed = push.full_rows @ y - push.rows @ a
             below = follow * below + (1 - follow) * missed
         e = e - sentinel.K @ (sentinel.H @ e + below + c.error[k])
