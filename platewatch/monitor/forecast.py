@@ -99,8 +99,12 @@ def carry(
     start: LoopStart,
     X: Array,
     options: ForecastOptions,
+    heat_ahead: Array | None = None,
 ) -> Path:
-    """Carry the draws X (n, N) over the horizon."""
+    """Carry the draws X (n, N) over the horizon.
+
+    heat_ahead (steps, r): modal watts of a cause, step by step
+    """
     k, N = quiet.blocks, X.shape[1]
     r, nz = k.modes, k.zones
     times = horizon_times(options)
@@ -132,6 +136,10 @@ def carry(
         a += rest[:r]
         Z[r : r + 2 * nz] = below
         R += rest[r:]
+        if heat_ahead is not None:
+            push = stack.modal @ heat_ahead[i]
+            a += push[:r, None]
+            R += push[r:, None]
         if look <= looked_at.size and looked_at[look - 1] == i:
             modes[look], asked[look] = a, c @ even
             look += 1
@@ -165,16 +173,23 @@ def _modal_heat(
     return np.asarray(push[:, :3] @ X[k.theta] + push[:, 3][:, None])
 
 
-def hottest_ahead(quiet: Quiet, where: Places, path: Path, region: str) -> tuple[Hottest, Array]:
-    """The coming peak of a region, and the maximum of each draw at each look (looks, N)."""
+def hottest_ahead(
+    quiet: Quiet, where: Places, path: Path, region: str, missed: Array | None = None
+) -> tuple[Hottest, Array]:
+    """The coming peak of a region, and the maximum of each draw at each look (looks, N).
+
+    missed (cells,): K to add to every field, what its modes cannot show
+    """
     place, N = where.regions[region], path.modes.shape[2]
     means = path.modes @ np.full(N, 1 / N)
     fields = means @ place.rows.T
+    if missed is not None:
+        fields = fields + missed[place.cells]
     spread = path.modes - means[:, :, None]
     hottest = place.rows[fields.argmax(axis=1)]
     margins = MARGIN_SD * np.matmul(hottest[:, None, :], spread)[:, 0, :].std(axis=1) + 0.1
     found = candidates(place, fields, margins)
-    base, values = values_of(place, found, means, spread)
+    base, values = values_of(place, found, fields, spread)
     tops = values.max(axis=1)
     when = tops.argmax(axis=0)
     draw = np.arange(N)

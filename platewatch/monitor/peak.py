@@ -118,14 +118,15 @@ def candidates(region: Region, fields: Array, margin_K: Array) -> NDArrayInt:
 
 
 def values_of(
-    region: Region, found: NDArrayInt, means: Array, spread: Array
+    region: Region, found: NDArrayInt, fields: Array, spread: Array
 ) -> tuple[float, Short]:
     """Temperatures of some cells in every draw: a base, and (looks, cells, draws) above it.
 
-    means (looks, r) modes;  spread (looks, r, draws) modes beyond their mean
+    fields (looks, m): mean temperatures of the region's cells;  spread (looks, r, draws):
+    modes beyond their mean
     Single precision serves for differences to the hottest: near it they round to 1e-6 K.
     """
-    fields = means @ region.rows[found].T
+    fields = fields[:, found]
     base = float(fields.max())
     values = np.matmul(region.short_rows[found], spread.astype(np.float32))
     values += (fields - base).astype(np.float32)[:, :, None]
@@ -169,15 +170,27 @@ def most_common(cells: NDArrayInt) -> int:
     return int(np.bincount(cells).argmax())
 
 
-def hottest_now(quiet: Quiet, where: Places, belief: Gaussian, Z: Array, region: str) -> Hottest:
-    """The present maximum of a region.  Z (n, draws) from `standard_draws`."""
+def hottest_now(
+    quiet: Quiet,
+    where: Places,
+    belief: Gaussian,
+    Z: Array,
+    region: str,
+    missed: Array | None = None,
+) -> Hottest:
+    """The present maximum of a region.  Z (n, draws) from `standard_draws`.
+
+    missed (cells,): K to add to the field, what its modes cannot show
+    """
     k, place = quiet.blocks.a, where.regions[region]
     spread = square_root(belief.cov[k, k]) @ Z[k]
     mean = belief.mean[k]
     field = place.rows @ mean
+    if missed is not None:
+        field = field + missed[place.cells]
     margin = MARGIN_SD * float((place.rows[field.argmax()] @ spread).std()) + 0.1
     found = candidates(place, field[None], np.array([margin]))
-    base, values = values_of(place, found, mean[None], spread[None])
+    base, values = values_of(place, found, field[None], spread[None])
     best = values[0].argmax(axis=0)
     samples = base + values[0, best, np.arange(best.size)].astype(np.float64)
     return Hottest(samples, most_common(place.cells[found[best]]))
