@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from platewatch import compose_plate as compose
+from platewatch import compose_study as study
 from platewatch.cli_parser import WHATIF_CAUTION
 from platewatch.errors import SettingsError, StorageError
 from platewatch.units import TemperatureUnit, from_degC, to_degC
@@ -17,7 +18,7 @@ from platewatch.units import TemperatureUnit, from_degC, to_degC
 def check(arguments: Namespace) -> int:
     """Every mistake of a description, else what follows from it."""
     description = compose.describe(Path(arguments.plate))
-    facts = compose.derive_facts(description)
+    facts = study.derive_facts(description)
     if arguments.json:
         told = asdict(facts) | {"warnings": list(facts.warnings)}
         print(json.dumps(told, indent=2))
@@ -42,7 +43,7 @@ class Degrees:
         return to_degC(_number(option, text), self._unit)
 
 
-def _fact_lines(facts: compose.Facts, degrees: Degrees) -> list[str]:
+def _fact_lines(facts: study.Facts, degrees: Degrees) -> list[str]:
     at = degrees.text(facts.reference_degC)
     verdict = "thin" if facts.is_thin else "NOT thin"
     lines = [
@@ -87,7 +88,7 @@ def whatif(arguments: Namespace) -> int:
     description = compose.describe(Path(arguments.plate))
     degrees = Degrees(description.unit)
     places = [_place(text) for text in arguments.at]
-    found = compose.what_if(
+    found = study.what_if(
         description,
         dict(_power(text) for text in arguments.power),
         _ambients(arguments.ambient, description, degrees),
@@ -96,7 +97,7 @@ def whatif(arguments: Namespace) -> int:
     )
     at = [(x, y, found.at(x / 1e3, y / 1e3)) for x, y in places]
     if arguments.picture:
-        _write_picture(Path(arguments.picture), compose.svg_picture(found))
+        _write_picture(Path(arguments.picture), study.svg_picture(found))
     if arguments.json:
         print(json.dumps(_whatif_object(found, at), indent=2))
         return 0
@@ -171,7 +172,7 @@ def _write_picture(path: Path, svg: str) -> None:
         raise StorageError(f"{path}: cannot be written ({error.strerror})") from None
 
 
-def _whatif_object(found: compose.WhatIf, at: list[tuple[float, float, float]]) -> dict[str, Any]:
+def _whatif_object(found: study.WhatIf, at: list[tuple[float, float, float]]) -> dict[str, Any]:
     return {
         "plate": found.plate.name,
         "after_s": found.after_s,

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 
@@ -13,27 +12,19 @@ from platewatch.monitor.estimator import build_quiet
 from platewatch.monitor.loops import build_loops
 from platewatch.monitor.peak import places, standard_draws
 from platewatch.monitor.pipeline import Monitor
-from platewatch.studies.facts import Facts, derive
-from platewatch.studies.picture import svg_picture
-from platewatch.studies.whatif import WhatIf, whatif_steady, whatif_transient
-from platewatch.thermal.conduction import NOMINAL_AMBIENT_DEGC, build_model
+from platewatch.thermal.conduction import build_model
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import reduce
 from platewatch.units import TemperatureUnit
 
 __all__ = [
     "Description",
-    "Facts",
     "Monitor",
-    "WhatIf",
     "build_monitor",
-    "derive_facts",
     "describe",
     "reference_degC",
     "surround_channels",
-    "svg_picture",
     "thermal_channels",
-    "what_if",
     "with_broker",
     "with_limits",
 ]
@@ -111,28 +102,3 @@ def with_limits(description: Description, other: Description) -> Description:
         )
     both = hashlib.sha256((description.sha256 + other.sha256).encode())
     return replace(description, alarm_limits=other.alarm_limits, sha256=both.hexdigest())
-
-
-def derive_facts(description: Description) -> Facts:
-    """What follows from a description, for `check`."""
-    return derive(build_monitor(description).quiet, reference_degC(description))
-
-
-def what_if(
-    description: Description,
-    powers: Mapping[str, float],
-    surround: Mapping[str, float],
-    loads: Sequence[str],
-    after_s: float | None,
-) -> WhatIf:
-    """A calculated field: steady, or some time after a start at ambient.
-
-    powers: W by zone;  surround: degC by channel, those not named count as 22 degC
-    """
-    plate = description.plate
-    if after_s is None:
-        return whatif_steady(plate, powers, surround, loads)
-    start_degC = next(iter(surround.values()), NOMINAL_AMBIENT_DEGC)
-    return whatif_transient(
-        plate, powers, surround, loads, after_s=after_s, initial_degC=start_degC
-    )

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import hashlib
 import time
-from collections import Counter
 from collections.abc import Callable, Iterable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import asdict, dataclass, field, replace
 from heapq import merge
 from pathlib import Path
@@ -13,7 +13,7 @@ from typing import Any
 
 from platewatch import __version__, compose
 from platewatch.clock import Clock
-from platewatch.errors import NoDataError, SettingsError, StorageError
+from platewatch.errors import NoDataError, PlatewatchError, SettingsError, StorageError
 from platewatch.types import AlarmState, BatchEvent, Flag, Outcome, PeakRow, Reading
 from platewatch.units import iso
 
@@ -56,7 +56,7 @@ class Summary:
     duplicates: int = 0
     backward: int = 0
     ticks: int = 0
-    reasons: Counter[str] = field(default_factory=Counter)
+    reasons: dict[str, int] = field(default_factory=dict)
     raised: list[Raised] = field(default_factory=list)
     hottest: PeakRow | None = None
     notes: list[str] = field(default_factory=list)
@@ -87,7 +87,7 @@ def replay_log(
     if is_record and wishes.columns is not None:
         raise SettingsError(f"{log}: is a database, which needs no --columns")
     columns = compose.load_columns(wishes.columns) if wishes.columns else None
-    with compose.open_store(str(out)) as store:
+    with _new_record(out) as store:
         work = _Replay(description, store, Pace(clock, wishes.speed))
         if is_record:
             _replay_record(work, log, wishes, told)
@@ -96,6 +96,24 @@ def replay_log(
         if not work.summary.rows:
             raise NoDataError(f"{log}: holds no reading between --from and --to")
         return work.summary
+
+
+@contextmanager
+def _new_record(out: Path) -> Iterator[compose.Store]:
+    """A record that goes again where nothing came into it, so that a second try finds none."""
+    store = compose.open_store(str(out))
+    try:
+        yield store
+    except PlatewatchError:
+        kept = (next(store.read_readings(plate), None) for plate in store.plates())
+        is_bare = not any(kept)
+        store.close()
+        if is_bare:
+            for ending in ("", "-wal", "-shm"):
+                out.with_name(out.name + ending).unlink(missing_ok=True)
+        raise
+    finally:
+        store.close()
 
 
 def _is_record(log: Path) -> bool:
@@ -207,7 +225,6 @@ class _Replay:
 def _replay_csv(work: _Replay, log: Path, wishes: Wishes, columns: Any, told: Told) -> None:
     reader = compose.read_log(log, work.units, columns=columns, offset=wishes.offset)
     whole = _count_lines(log)
-    work.begin(0, None)
     begun = False
     for number, row in enumerate(reader):
         if row.at_us is not None and _within(row.at_us, wishes):
@@ -277,9 +294,10 @@ def _replay_run(
     from_us = closed_us + 1 if closed_us is not None else None
     to_us = until_us + 1 if until_us is not None else None
     for done in source.actions(work.plate):
-        if done.applied_us is not None and _in_run(done.applied_us, from_us, to_us):
+        at_us = done.applied_us
+        if at_us is not None and _in_run(at_us, from_us, to_us) and _within(at_us, wishes):
             copied = replace(done.action, seq=_copy_action(work, done.action))
-            work.session.act([copied], done.applied_us)
+            work.session.act([copied], at_us)
     readings = ((r.at_us, 1, r) for r in source.read_readings(work.plate, from_us, to_us))
     events = ((e.at_us, 0, e) for e in source.events(work.plate, from_us, to_us))
     both: Iterator[tuple[int, int, Any]] = merge(events, readings, key=lambda item: item[:2])

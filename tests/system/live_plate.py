@@ -89,8 +89,8 @@ class Daemon:
         with self.log_path.open("w") as log:
             self._process = subprocess.Popen(
                 [
-                    *(sys.executable, "-m", "platewatch", "run", str(PLATE)),
-                    *("--broker", f"127.0.0.1:{port}", "--db", str(record), *more),
+                    *(sys.executable, "-m", "platewatch", "run", str(PLATE), *more),
+                    *("--broker", f"127.0.0.1:{port}", "--db", str(record)),
                 ],
                 stderr=log,
             )
@@ -120,13 +120,20 @@ class Gateway:
         self._client.loop_start()
         self.sent = 0
 
-    def send(self, at_us: int, more: Mapping[str, float] | None = None) -> None:
-        values = dict.fromkeys(SENSORS, 120.0 + 0.1 * (self.sent % 3))
-        values |= dict.fromkeys(DUTIES, 0.25)
-        body = {"at": iso(at_us), **values, **(more or {})}
-        said = self._client.publish("plates/table-1/readings", json.dumps(body), qos=1)
-        said.wait_for_publish(10)
+    def send(
+        self, at_us: int, more: Mapping[str, float] | None = None, plate: str = "table-1"
+    ) -> None:
+        """A sample of every channel, or for another plate of those given."""
+        body: dict[str, object] = {"at": iso(at_us), **(more or {})}
+        if plate == "table-1":
+            body |= self._values()
+        topic = f"plates/{plate}/readings"
+        self._client.publish(topic, json.dumps(body), qos=1).wait_for_publish(10)
         self.sent += 1
+
+    def _values(self) -> dict[str, float]:
+        values = dict.fromkeys(SENSORS, 120.0 + 0.1 * (self.sent % 3))
+        return values | dict.fromkeys(DUTIES, 0.25)
 
     def send_for(self, seconds: float, every_s: float = 0.25) -> None:
         """Live readings for so long."""

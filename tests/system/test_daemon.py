@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import sqlite3
 import time
 from pathlib import Path
 
@@ -11,6 +12,7 @@ from live_plate import PLATE, TABLES, Daemon, Gateway, assert_same, count, rows,
 from paho.mqtt.client import Client
 from paho.mqtt.enums import CallbackAPIVersion
 
+from platewatch import compose
 from platewatch.adapters.broker import EmbeddedBroker, free_port
 from platewatch.cli import main
 
@@ -123,3 +125,45 @@ def test_the_bus_hears_peak_alive_and_stopped(tmp_path: Path) -> None:
     assert heard[peak][0].keys() >= {"at", "run", "now", "ahead", "alarm_limit_degC", "p_over"}
     assert heard[peak][0]["inferred"] is True
     assert heard[peak][0]["run"] == 1
+
+
+def test_a_record_that_is_locked_for_a_while_delays_and_loses_nothing(tmp_path: Path) -> None:
+    """Nothing is acknowledged before it is stored; one line tells of the trouble."""
+    record = tmp_path / "r.sqlite"
+    with EmbeddedBroker() as broker:
+        gateway = Gateway(broker.port)
+        daemon = Daemon(broker.port, record)
+        assert daemon.said("connected")
+        gateway.send_for(2.0)
+        other = sqlite3.connect(record, isolation_level=None)
+        other.execute("BEGIN IMMEDIATE")
+        gateway.send_for(2.0)
+        assert daemon.said("record not written, nothing acknowledged", 15)
+        other.execute("ROLLBACK")
+        other.close()
+        assert wait_for(lambda: count(record, "reading") == gateway.sent * CHANNELS, 15)
+        assert daemon.terminate() == 0
+        gateway.close()
+
+
+def test_one_daemon_watches_two_plates(tmp_path: Path) -> None:
+    """Design, section 10a: one process runs several, here into one record."""
+    record = tmp_path / "r.sqlite"
+    other = PLATE.with_name("preheater.toml")
+    sensor = compose.describe(other).plate.sensors[0].name
+    with EmbeddedBroker() as broker:
+        gateway = Gateway(broker.port)
+        daemon = Daemon(broker.port, record, str(other))
+        assert wait_for(lambda: daemon.log.count("connected") == 2, 20)
+        for _ in range(4):
+            at_us = time.time_ns() // 1000
+            gateway.send(at_us)
+            gateway.send(at_us, {f"sensor/{sensor}": 25.0}, plate="preheater")
+            time.sleep(0.2)
+        assert wait_for(lambda: daemon.log.count("first readings") == 2, 20)
+        assert daemon.terminate() == 0
+        gateway.close()
+    plates = "SELECT count(DISTINCT plate) FROM peak"
+    connection = sqlite3.connect(record)
+    assert connection.execute(plates).fetchone() == (2,)
+    connection.close()

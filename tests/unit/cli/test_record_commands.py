@@ -12,6 +12,7 @@ from _pytest.capture import CaptureFixture
 from platewatch.cli import main
 
 Cli = CaptureFixture[str]
+CONFIG = Path(__file__).resolve().parents[3] / "config"
 
 
 @pytest.fixture
@@ -56,7 +57,7 @@ def test_alarms_are_read_by_a_machine(record: str, capfd: Cli) -> None:
 def test_exported_readings_replay_to_the_same_peaks(record: str, tmp_path: Path) -> None:
     """Design, section 4: the export is the wide log that replay reads, to the last bit."""
     log, again = tmp_path / "log.csv", tmp_path / "again.sqlite"
-    plate = Path(__file__).resolve().parents[3] / "config" / "demo-table.toml"
+    plate = CONFIG / "demo-table.toml"
     assert main(["export", "readings", "--db", record, "--out", str(log)]) == 0
     assert main(["replay", str(plate), str(log), "--db", str(again)]) == 1
     tables = []
@@ -178,3 +179,43 @@ def test_whatif_ends_with_its_caution_and_balances_its_heat(
     found = json.loads(capfd.readouterr().out)
     assert found["heat"]["lost"] == pytest.approx(300.0, abs=1e-3)
     assert found["at"][0]["degC"] < found["hottest"]["degC"]
+
+
+@pytest.mark.parametrize("name", sorted(path.name for path in CONFIG.glob("*.toml")))
+def test_every_plate_in_config_is_checked_without_a_mistake(name: str, capfd: Cli) -> None:
+    """Design, section 3: each is loaded and run by a test."""
+    assert main(["check", str(CONFIG / name)]) == 0
+    told = capfd.readouterr().out
+    assert "holds no mistake" in told
+    assert "spread length" in told
+
+
+def test_a_part_of_a_record_is_replayed(
+    hot_record: str, plate: str, tmp_path: Path, capfd: Cli
+) -> None:
+    """Design, section 2: --from and --to, half-open."""
+    words = ["replay", plate, hot_record, "--db", str(tmp_path / "o.sqlite"), "--json"]
+    times = ["--from", "2026-03-01T08:01:00Z", "--to", "2026-03-01T08:02:00Z"]
+    assert main([*words, *times]) in (0, 1)
+    told = json.loads(capfd.readouterr().out)
+    assert told["rows"] == told["stored"] == 30 * 15
+    assert told["ticks"] == 30
+
+
+def test_a_replay_that_found_nothing_leaves_nothing(
+    hot_record: str, plate: str, tmp_path: Path
+) -> None:
+    """So that the second try, with the right times, is not told of an older record."""
+    out = tmp_path / "o.sqlite"
+    words = ["replay", plate, hot_record, "--db", str(out)]
+    assert main([*words, "--from", "2027-01-01T00:00:00Z"]) == 3
+    assert not list(tmp_path.iterdir())
+    assert main(words) == 1
+
+
+def test_refusals_are_told_to_a_machine_by_reason(plate: str, tmp_path: Path, capfd: Cli) -> None:
+    """--json of a replay names each reason with its count."""
+    log = tmp_path / "n.csv"
+    log.write_text("at,sensor/T1\n2026-03-01T08:00:00Z,1\n2026-03-01T08:00:02Z,NaN\n")
+    assert main(["replay", plate, str(log), "--db", str(tmp_path / "o.sqlite"), "--json"]) == 0
+    assert json.loads(capfd.readouterr().out)["reasons"] == {"not a number": 1}
