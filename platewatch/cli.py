@@ -38,7 +38,9 @@ def main(argv: Sequence[str] | None = None) -> int:
         known_command(words)
         arguments = build_parser().parse_args(words)
         command = arguments.command
-        return int(getattr(importlib.import_module(MODULES[command]), command)(arguments))
+        code = int(getattr(importlib.import_module(MODULES[command]), command)(arguments))
+        sys.stdout.flush()
+        return code
     except PlatewatchError as error:
         for line in str(error).splitlines():
             print(f"platewatch: {line}", file=sys.stderr)

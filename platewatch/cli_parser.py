@@ -222,7 +222,11 @@ def _export(commands: Commands) -> None:
         "write readings, peaks, alarms or the field at one moment as CSV or Parquet",
         "export readings --db table-1.sqlite --out monday.csv",
     )
-    parser.add_argument("what", choices=("readings", "peaks", "alarms", "field"))
+    parser.add_argument(
+        "what",
+        choices=("readings", "peaks", "alarms", "field"),
+        help="readings: those that were used, as a wide log that replay takes",
+    )
     parser.add_argument("--db", metavar="FILE", required=True)
     parser.add_argument("--out", metavar="FILE", required=True, help="ends in .csv or .parquet")
     _times(parser)

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import json
+import shutil
 import sqlite3
+import subprocess
 import time
 from pathlib import Path
 
@@ -167,3 +169,27 @@ def test_one_daemon_watches_two_plates(tmp_path: Path) -> None:
     connection = sqlite3.connect(record)
     assert connection.execute(plates).fetchone() == (2,)
     connection.close()
+
+
+@pytest.mark.broker
+@pytest.mark.skipif(not shutil.which("mosquitto"), reason="needs the mosquitto broker")
+def test_what_mosquitto_kept_for_a_killed_daemon_is_taken_up(tmp_path: Path) -> None:
+    """Debian's broker as it comes, 20 messages in flight: 200 that wait all reach the record."""
+    record, port = tmp_path / "r.sqlite", free_port()
+    broker = subprocess.Popen(["mosquitto", "-p", str(port)], stderr=subprocess.DEVNULL)
+    try:
+        daemon = Daemon(port, record)
+        assert daemon.said("connected", 40)
+        gateway = Gateway(port)
+        gateway.send_for(2.0)
+        daemon.kill()
+        start_us = time.time_ns() // 1000
+        for number in range(200):
+            gateway.send(start_us + 1000 * number)
+        daemon = Daemon(port, record)
+        assert wait_for(lambda: count(record, "reading") == gateway.sent * CHANNELS, 30)
+        assert daemon.terminate() == 0
+        gateway.close()
+    finally:
+        broker.terminate()
+        broker.wait()
