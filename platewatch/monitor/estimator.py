@@ -15,7 +15,7 @@ from platewatch.monitor.kalman import Coupling, Innovation, predict_coupled, upd
 from platewatch.monitor.tolerance import tolerance_K
 from platewatch.monitor.transition import Blocks, Continuous, Noise, Steps
 from platewatch.thermal.conduction import InputKind, conduction_matrix
-from platewatch.thermal.grid import Grid
+from platewatch.thermal.grid import Grid, hats
 from platewatch.thermal.plate import Plate, Sensor, geometry
 from platewatch.thermal.reduction import (
     ReducedModel,
@@ -125,21 +125,6 @@ class Observed:
     called_end_W: Array
     around: Array
     duty_heard: bool = True
-
-
-def hats(grid: Grid, nodes: int) -> Array:
-    """Bilinear hat functions of a coarse mesh over the plate's bounding box: (cells, nodes).
-
-    They sum to 1 in every cell.
-    """
-    width, height = np.ptp(grid.x) + grid.hx, np.ptp(grid.y) + grid.hy
-    across = int(np.clip(round(np.sqrt(nodes * width / height)), 2, nodes // 2))
-    along = max(2, round(nodes / across))
-    u = (grid.x - grid.x.min() + grid.hx / 2) / width * (across - 1)
-    v = (grid.y - grid.y.min() + grid.hy / 2) / height * (along - 1)
-    hats_x = np.clip(1 - np.abs(u[:, None] - np.arange(across)), 0, None)
-    hats_y = np.clip(1 - np.abs(v[:, None] - np.arange(along)), 0, None)
-    return np.asarray((hats_x[:, :, None] * hats_y[:, None, :]).reshape(grid.x.size, -1))
 
 
 def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
@@ -291,13 +276,20 @@ def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
 
 def sensitivities(quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array) -> Array:
     """Modal heat (r, 3) per unit relative error of conductivity, losses, heat capacity,
-    with the remainder of the losses as a fourth column."""
-    system = quiet.steps.system
-    rest = remainder(quiet.reduced, a, quiet.inputs(zone_W, around))
+    with the remainder as a fourth column: bent losses, k(T) and cp(T)."""
+    system, properties = quiet.steps.system, quiet.reduced.properties
+    u = quiet.inputs(zone_W, around)
+    rest = remainder(quiet.reduced, a, u)
     spread = quiet.conduction @ a
     lost = quiet.losses @ a - system.heat_around @ around - system.constant - rest
     warming = system.heat_zone @ zone_W + system.heat_bump @ bump - spread - lost
-    return np.array((-spread, -lost, -warming, rest)).T
+    if properties is None:
+        return np.array((-spread, -lost, -warming, rest)).T
+    linear = warming - rest
+    more = properties.conducted(a, u)
+    heat = np.array((-spread - more, -lost, warming - more)).T
+    by_k, by_losses, warming = properties.warming(a, heat).T
+    return np.array((by_k, by_losses, -warming, warming - linear)).T
 
 
 def advance(

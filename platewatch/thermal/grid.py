@@ -138,6 +138,21 @@ def on_plate(grid: Grid, x: float, y: float) -> bool:
     return bool(grid.domain.distance(shapely.Point(x, y)) <= 1e-9)
 
 
+def hats(grid: Grid, nodes: int) -> Array:
+    """Bilinear hat functions of a coarse mesh over the plate's bounding box: (cells, nodes).
+
+    They sum to 1 in every cell.
+    """
+    width, height = np.ptp(grid.x) + grid.hx, np.ptp(grid.y) + grid.hy
+    across = int(np.clip(round(np.sqrt(nodes * width / height)), 2, nodes // 2))
+    along = max(2, round(nodes / across))
+    u = (grid.x - grid.x.min() + grid.hx / 2) / width * (across - 1)
+    v = (grid.y - grid.y.min() + grid.hy / 2) / height * (along - 1)
+    hats_x = np.clip(1 - np.abs(u[:, None] - np.arange(across)), 0, None)
+    hats_y = np.clip(1 - np.abs(v[:, None] - np.arange(along)), 0, None)
+    return np.asarray((hats_x[:, :, None] * hats_y[:, None, :]).reshape(grid.x.size, -1))
+
+
 def point_row(grid: Grid, x: float, y: float) -> Array:
     """Weights (n,) that give the temperature at a point; they sum to 1.
 

@@ -10,6 +10,7 @@ import numpy as np
 
 from platewatch.thermal.conduction import InputKind, ThermalModel, input_vector, steady
 from platewatch.thermal.full import FullEquations
+from platewatch.thermal.properties import Properties
 from platewatch.thermal.quadrature import Quadrature
 from platewatch.thermal.stepping import GAMMA, Factored, factor, one_step
 from platewatch.types import Array
@@ -81,9 +82,14 @@ def missed(model: ThermalModel, V: Array, rates: Array, full: HeatUp) -> float:
 
 
 def bend(
-    model: ThermalModel, V: Array, rates: Array, quadrature: Quadrature | None, full: HeatUp
+    model: ThermalModel,
+    V: Array,
+    rates: Array,
+    quadrature: Quadrature | None,
+    properties: Properties | None,
+    full: HeatUp,
 ) -> float:
-    """Largest difference, K, that fixed properties and the coarse loss make.
+    """Largest difference, K, that properties and losses on a few places make.
 
     The same modes are driven by the full equations (k and cp at every cell's own
     temperature, exact losses) and by the reduced ones.
@@ -102,8 +108,10 @@ def bend(
     def by_reduced(t: float, v: Array) -> Array:
         u = full.at(t)
         extra = 0.0 if quadrature is None else quadrature.excess(v, u)
-        reduced: Array = G @ u + g0 - rates * v + extra
-        return reduced
+        heat: Array = G @ u + g0 - rates * v + extra
+        if properties is None:
+            return heat
+        return properties.warming(v, (heat - properties.conducted(v, u))[:, None])[:, 0]
 
     true = _stepped(rates, full.dt, a, by_full)
     ours = _stepped(rates, full.dt, a, by_reduced)

@@ -21,6 +21,7 @@ from platewatch.errors import PlateError
 from platewatch.thermal.conduction import Input, ThermalModel
 from platewatch.thermal.grid import footprint, point_row
 from platewatch.thermal.heatup import bend, heat_up, missed
+from platewatch.thermal.properties import Properties, build_properties
 from platewatch.thermal.quadrature import Quadrature, build_quadrature
 from platewatch.thermal.rim import Ints
 from platewatch.thermal.stepping import lu
@@ -37,8 +38,8 @@ class ReducedModel:
 
     V (n, r) with V'C V = 1;  rates (r,) 1/s;  G (r, m);  g0 (r,)
     error_K: largest difference to the full model over a heat-up, measured when built
-    left_out_K: the part of it that the left-out modes cause; the rest is k(T) and cp(T)
-        at one temperature, and the coarse places of the losses
+    left_out_K: the part of it that the left-out modes cause; the rest is the coarse
+        places of the losses, of k(T) and of cp(T)
     basis_hash: gives a stored state its meaning
     """
 
@@ -51,6 +52,7 @@ class ReducedModel:
     left_out_K: float
     basis_hash: str
     quadrature: Quadrature | None = field(repr=False)
+    properties: Properties | None = field(repr=False)
 
     @property
     def order(self) -> int:
@@ -86,11 +88,11 @@ def reduce(model: ThermalModel, order: int | None = None, tolerance_K: float = 0
         left_out = missed(model, V, rates, full)
         if left_out <= tolerance_K:
             break
-    quadrature = build_quadrature(model, V)
+    quadrature, properties = build_quadrature(model, V), build_properties(model, V)
     error = left_out
     if quadrature is not None or not model.stack.is_constant:
-        error += bend(model, V, rates, quadrature, full)
-    return _finished(model, V, rates, quadrature, error, left_out)
+        error += bend(model, V, rates, quadrature, properties, full)
+    return _finished(model, V, rates, quadrature, properties, error, left_out)
 
 
 def project(reduced: ReducedModel, T: Array) -> Array:
@@ -124,6 +126,21 @@ def remainder(reduced: ReducedModel, a: Array, u: Array) -> Array:
     if reduced.quadrature is None:
         return np.zeros(reduced.order)
     return reduced.quadrature.excess(a, u)
+
+
+def property_remainder(reduced: ReducedModel, a: Array, u: Array, adot: Array) -> Array:
+    """What k(T) and cp(T) add to adot (r,) 1/s, the da/dt that includes `remainder`."""
+    if reduced.properties is None:
+        return np.zeros(reduced.order)
+    heat = (adot - reduced.properties.conducted(a, u))[:, None]
+    return reduced.properties.warming(a, heat)[:, 0] - adot
+
+
+def radiated(reduced: ReducedModel, a: Array, u: Array) -> Array:
+    """V'(net radiation) (r,): the part of the losses that emissivity scales."""
+    if reduced.quadrature is None:
+        return np.zeros(reduced.order)
+    return reduced.quadrature.radiated(a, u)
 
 
 def static_correction(reduced: ReducedModel, q: Array) -> tuple[Array, float]:
@@ -220,10 +237,12 @@ def _finished(
     V: Array,
     rates: Array,
     quadrature: Quadrature | None,
+    properties: Properties | None,
     error_K: float,
     left_out_K: float,
 ) -> ReducedModel:
     digest = hashlib.sha256(V.tobytes())
     digest.update(rates.tobytes())
     G, g0 = V.T @ model.B, V.T @ model.offset
-    return ReducedModel(V, rates, G, g0, model, error_K, left_out_K, digest.hexdigest(), quadrature)
+    errors = error_K, left_out_K
+    return ReducedModel(V, rates, G, g0, model, *errors, digest.hexdigest(), quadrature, properties)
