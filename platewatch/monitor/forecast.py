@@ -28,6 +28,7 @@ from platewatch.types import Array
 
 DRAWS_AHEAD = 64
 REFRESH_S = 60.0  # the remainder of the losses is evaluated this often along the way
+REFRESH_TABLES_S = 20.0  # the same with cp(T), which weighs what the heaters do meanwhile
 NEAR_S = 60.0  # every step is looked at up to here, every third one beyond
 
 
@@ -124,7 +125,8 @@ def carry(
     keep, even = np.repeat(stack.keep, N, axis=1), np.full(N, 1 / N)
     heated, below, look = np.empty((r, N)), np.empty((2 * nz, N)), 1
     rest = held
-    refresh = max(1, round(REFRESH_S / options.step_s))
+    often_s = REFRESH_S if quiet.reduced.properties is None else REFRESH_TABLES_S
+    refresh = max(1, round(often_s / options.step_s))
     for i in range(times.size):
         if i % refresh == 0:
             rest = held + _modal_heat(quiet, state, stack, a, p, X)
