@@ -172,7 +172,7 @@ def _modal_heat(
     delivered = p @ even + state.belief.mean[k.d]
     S = sensitivities(quiet, a @ even, delivered, state.belief.mean[k.b], state.around)
     push = stack.modal @ S
-    return np.asarray(push[:, :3] @ X[k.theta] + push[:, 3][:, None])
+    return np.asarray(push[:, :-1] @ X[k.theta] + push[:, -1][:, None])
 
 
 def hottest_ahead(
@@ -192,10 +192,10 @@ def hottest_ahead(
     margins = MARGIN_SD * np.matmul(hottest[:, None, :], spread)[:, 0, :].std(axis=1) + 0.1
     found = candidates(place, fields, margins)
     base, values = values_of(place, found, fields, spread)
-    tops = values.max(axis=1)
+    tops = values.max(axis=2)
     when = tops.argmax(axis=0)
     draw = np.arange(N)
-    cells = place.cells[found[values[when, :, draw].argmax(axis=1)]]
+    cells = place.cells[found[values[when, draw].argmax(axis=1)]]
     samples = base + tops[when, draw].astype(np.float64)
     at_s = float(np.median(path.times_s[when]))
     return Hottest(samples, most_common(cells), at_s), base + tops.astype(np.float64)

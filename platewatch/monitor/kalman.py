@@ -115,9 +115,8 @@ def update(
     K = np.ascontiguousarray(dpotrs(factor, HP, lower=1)[0].T)
     if considered is not None:
         K[considered] = 0.0
-    W = prior.cov - K @ HP
-    cov = W - (W @ H.T) @ K.T
-    cov += (K * R) @ K.T
+    cov = prior.cov - K @ HP
+    cov -= (cov @ H.T - K * R) @ K.T
     cov += cov.T
     cov *= 0.5
     nis = float(residual @ weighed)

@@ -120,7 +120,7 @@ def candidates(region: Region, fields: Array, margin_K: Array) -> NDArrayInt:
 def values_of(
     region: Region, found: NDArrayInt, fields: Array, spread: Array
 ) -> tuple[float, Short]:
-    """Temperatures of some cells in every draw: a base, and (looks, cells, draws) above it.
+    """Temperatures of some cells in every draw: a base, and (looks, draws, cells) above it.
 
     fields (looks, m): mean temperatures of the region's cells;  spread (looks, r, draws):
     modes beyond their mean
@@ -128,8 +128,10 @@ def values_of(
     """
     fields = fields[:, found]
     base = float(fields.max())
-    values = np.matmul(region.short_rows[found], spread.astype(np.float32))
-    values += (fields - base).astype(np.float32)[:, :, None]
+    # Draws in rows: maxima are then sought along memory.
+    short = np.ascontiguousarray(spread.astype(np.float32).transpose(0, 2, 1))
+    values = np.matmul(short, np.ascontiguousarray(region.short_rows[found].T))
+    values += (fields - base).astype(np.float32)[:, None, :]
     return base, values
 
 
@@ -191,8 +193,8 @@ def hottest_now(
     margin = MARGIN_SD * float((place.rows[field.argmax()] @ spread).std()) + 0.1
     found = candidates(place, field[None], np.array([margin]))
     base, values = values_of(place, found, field[None], spread[None])
-    best = values[0].argmax(axis=0)
-    samples = base + values[0, best, np.arange(best.size)].astype(np.float64)
+    best = values[0].argmax(axis=1)
+    samples = base + values[0, np.arange(best.size), best].astype(np.float64)
     return Hottest(samples, most_common(place.cells[found[best]]))
 
 
