@@ -22,6 +22,7 @@ from platewatch.thermal.reduction import (
     flux_modes,
     point_rows,
     project,
+    radiated,
     remainder,
 )
 from platewatch.types import Array, Gaussian
@@ -29,7 +30,7 @@ from platewatch.types import Array, Gaussian
 BUMPS = 24  # nodes of the coarse mesh that carries the smooth unknown heat
 LEAST_LAG_S = 0.5  # a thermocouple without lag would only stiffen the arithmetic
 BIAS_WITHOUT_CLASS_K = 0.2
-POWER_MEMORY_S = 900.0
+POWER_MEMORY_S = 240.0
 BUMP_MEMORY_S = 3600.0
 BIAS_MEMORY_S = 30 * 86400.0
 THETA_MEMORY_S = 30 * 86400.0
@@ -44,8 +45,11 @@ LONGEST_STEP_US = 120_000_000
 # standard deviations each, tell that the plate was not left alone: start from them.
 FORGET_AFTER_US = 300_000_000
 FORGET_NIS = 16.0
-# Half of the losses' relative uncertainty may differ from place to place.
-LOCAL_SHARE = 0.5
+# Of a relative uncertainty so much (in standard deviations) differs from place to place,
+# for losses, or from zone to zone, for power; the rest is common to the plate.
+LOCAL_SHARE = 0.2
+ZONE_SHARE = 0.5
+PARAMETERS = 5  # conductivity, losses, heat capacity, power, emissivity
 
 
 @dataclass(frozen=True)
@@ -134,11 +138,12 @@ def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
 
 
 def bias_sd_K(sensor: Sensor, reference_degC: float) -> float:
-    """Half the class limit (IEC 60584-1, IEC 60751): the limit is taken as two sd."""
+    """Anywhere within the limit of the class (IEC 60584-1, IEC 60751) with equal probability:
+    the limit over the root of three (JCGM 100:2008, 4.3.7)."""
     if sensor.tolerance_class is None:
         return BIAS_WITHOUT_CLASS_K
     limit = tolerance_K(sensor.element, sensor.tolerance_class, reference_degC)
-    return BIAS_WITHOUT_CLASS_K if limit is None else limit / 2
+    return BIAS_WITHOUT_CLASS_K if limit is None else limit / 3**0.5
 
 
 def nearest_zone(plate: Plate, grid: Grid) -> tuple[str, ...]:
@@ -157,15 +162,18 @@ def nearest_zone(plate: Plate, grid: Grid) -> tuple[str, ...]:
 
 def _noise(plate: Plate, reference_degC: float, loss_W_m2: float, heard: bool) -> Noise:
     watts = np.array([zone.watts for zone in plate.zones])
-    share = plate.uncertain.power if heard else 0.5
+    sure = plate.uncertain
+    share = ZONE_SHARE * sure.power if heard else 0.5
+    of_losses, of_power = np.sqrt(1 - LOCAL_SHARE**2), np.sqrt(1 - ZONE_SHARE**2)
+    theta = (sure.k, of_losses * sure.losses, sure.cp, of_power * sure.power, sure.emissivity)
     return Noise(
         power_W=share * watts,
         power_s=POWER_MEMORY_S if heard else POWER_MEMORY_S / 6,
-        bump_W_m2=LOCAL_SHARE * plate.uncertain.losses * loss_W_m2,
+        bump_W_m2=LOCAL_SHARE * sure.losses * loss_W_m2,
         bump_s=BUMP_MEMORY_S,
         bias_K=np.array([bias_sd_K(s, reference_degC) for s in plate.sensors]),
         bias_s=BIAS_MEMORY_S,
-        theta=np.array([plate.uncertain.k, plate.uncertain.losses, plate.uncertain.cp]),
+        theta=np.array(theta),
         theta_s=THETA_MEMORY_S,
     )
 
@@ -181,7 +189,7 @@ def build_quiet(plate: Plate, reduced: ReducedModel, reference_degC: float) -> Q
     bumps = flux_modes(reduced, bump_fluxes(grid))
     rows = point_rows(reduced, np.array([(s.x_m, s.y_m) for s in plate.sensors]))
     ns = len(plate.sensors)
-    blocks = Blocks(reduced.rates.size, len(zone_u), bumps.shape[1], ns, 3)
+    blocks = Blocks(reduced.rates.size, len(zone_u), bumps.shape[1], ns, PARAMETERS)
     ambient = float(around_default.mean()) if around_default.size else 22.0
     loss_W_m2 = _typical_loss(reduced, reference_degC, ambient)
 
@@ -275,21 +283,24 @@ def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
 
 
 def sensitivities(quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array) -> Array:
-    """Modal heat (r, 3) per unit relative error of conductivity, losses, heat capacity,
-    with the remainder as a fourth column: bent losses, k(T) and cp(T)."""
+    """Modal heat (r, PARAMETERS + 1) per unit relative error of conductivity, of losses but
+    for radiation, of heat capacity, heater power and emissivity; in the last column the
+    remainder: bent losses, k(T) and cp(T)."""
     system, properties = quiet.steps.system, quiet.reduced.properties
     u = quiet.inputs(zone_W, around)
     rest = remainder(quiet.reduced, a, u)
+    rays = radiated(quiet.reduced, a, u)
     spread = quiet.conduction @ a
     lost = quiet.losses @ a - system.heat_around @ around - system.constant - rest
-    warming = system.heat_zone @ zone_W + system.heat_bump @ bump - spread - lost
+    zone_heat = system.heat_zone @ zone_W
+    warming = zone_heat + system.heat_bump @ bump - spread - lost
     if properties is None:
-        return np.array((-spread, -lost, -warming, rest)).T
+        return np.array((-spread, rays - lost, -warming, zone_heat, -rays, rest)).T
     linear = warming - rest
     more = properties.conducted(a, u)
-    heat = np.array((-spread - more, -lost, warming - more)).T
-    by_k, by_losses, warming = properties.warming(a, heat).T
-    return np.array((by_k, by_losses, -warming, warming - linear)).T
+    heat = np.array((-spread - more, rays - lost, zone_heat, -rays, warming - more)).T
+    by_k, by_losses, by_power, by_rays, warming = properties.warming(a, heat).T
+    return np.array((by_k, by_losses, -warming, by_power, by_rays, warming - linear)).T
 
 
 def advance(
@@ -337,12 +348,12 @@ def forecast_step(
         + step.called @ called_W
         + step.around @ around
         + step.constant
-        + by_theta[:, 3]
+        + by_theta[:, -1]
     )
     couplings = (
         *step.couplings,
-        Coupling(k.a, k.theta, by_theta[k.a, :3]),
-        Coupling(k.L, k.theta, by_theta[k.L, :3]),
+        Coupling(k.a, k.theta, by_theta[k.a, :-1]),
+        Coupling(k.L, k.theta, by_theta[k.L, :-1]),
     )
     heater_W = step.decay * state.heater_W + (1 - step.decay) * called_W
     return predict_coupled(state.belief, step.keep, couplings, step.Q, push), heater_W

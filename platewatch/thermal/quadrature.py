@@ -63,6 +63,17 @@ class Quadrature:
             linear -= table.at(T, u)
         return self.spread @ linear
 
+    def radiated(self, a: Array, u: Array) -> Array:
+        """V'(net radiation) (r,) of the state a (r,) and inputs u (m,), in modal watts."""
+        square = (self.rows @ a + ZERO_DEGC_K) ** 2
+        fourth = square * square
+        flux = np.zeros_like(fourth)
+        for table in self.tables:
+            grey = table.face.emissivity * STEFAN_BOLTZMANN
+            T_sur = float(u[table.face.surroundings])
+            flux += grey * (fourth - (T_sur + ZERO_DEGC_K) ** 4)
+        return self.spread @ flux
+
 
 def build_quadrature(model: ThermalModel, V: Array) -> Quadrature | None:
     """About 48 places, each the mean of a block of cells; None if every loss is linear."""

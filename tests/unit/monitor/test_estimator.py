@@ -203,10 +203,11 @@ def test_every_cell_counts_to_the_nearest_heater():
     assert (zones[grid.x > 0.201] == "R").all()
 
 
-def test_a_tolerance_class_is_taken_as_two_standard_deviations():
-    """IEC 60584-1: class 1 of type K is 1.5 degC up to 375 degC, so 0.75 K."""
+def test_within_its_tolerance_class_a_thermocouple_may_be_off_by_anything():
+    """IEC 60584-1: class 1 of type K is 1.5 degC up to 375 degC; JCGM 100:2008, 4.3.7:
+    equal probability within limits of 1.5 K has the standard deviation 1.5 K / sqrt 3."""
     sensor = plate().sensors[0]
-    assert bias_sd_K(sensor, 120.0) == pytest.approx(0.75)
+    assert bias_sd_K(sensor, 120.0) == pytest.approx(1.5 / 3**0.5)
     assert bias_sd_K(replace(sensor, tolerance_class=None), 120.0) == 0.2
 
 

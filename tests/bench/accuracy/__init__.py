@@ -1,0 +1,1 @@
+"""How well the inferred field, its band and its alarms agree with simulated truth."""
