@@ -216,15 +216,22 @@ def _van_loan(A: Array, q: Array, dt_s: float) -> Array:
     return np.asarray((Q + Q.T) / 2)
 
 
+MOST_STEPS = 12  # lengths kept: the ticks, the forecast's, and what silences leave over
+
+
 @dataclass(frozen=True)
 class Steps:
-    """Exact steps by length, built once each."""
+    """Exact steps by length; those used last are kept."""
 
     system: Continuous
     _known: dict[tuple[int, bool], Step] = field(default_factory=dict)
 
     def of(self, dt_us: int, hold: bool = False) -> Step:
         key = (dt_us, hold)
-        if key not in self._known:
-            self._known[key] = exact_step(self.system, dt_us / 1e6, hold)
-        return self._known[key]
+        step = self._known.pop(key, None)
+        if step is None:
+            step = exact_step(self.system, dt_us / 1e6, hold)
+        self._known[key] = step  # now the last of the dictionary
+        if len(self._known) > MOST_STEPS:
+            del self._known[next(iter(self._known))]
+        return step

@@ -4,7 +4,14 @@ import numpy as np
 import pytest
 from scipy.linalg import expm
 
-from platewatch.monitor.transition import Blocks, Continuous, Noise, Steps, exact_step
+from platewatch.monitor.transition import (
+    MOST_STEPS,
+    Blocks,
+    Continuous,
+    Noise,
+    Steps,
+    exact_step,
+)
 
 POWER_S, BUMP_S = 900.0, 3600.0
 LENGTHS_S = (0.1, 2.0, 60.0, 600.0)
@@ -172,3 +179,13 @@ def test_a_length_is_worked_out_once():
     steps = Steps(plate_of_few_modes())
     assert steps.of(2_000_000) is steps.of(2_000_000)
     assert steps.of(2_000_000) is not steps.of(2_000_000, hold=True)
+
+
+def test_silences_of_every_length_do_not_fill_the_memory():
+    """A hundred odd lengths between ticks: few are kept, the ticks' own among them."""
+    steps = Steps(plate_of_few_modes())
+    tick = steps.of(2_000_000)
+    for k in range(100):
+        steps.of(100_000 * (k + 21))
+        assert steps.of(2_000_000) is tick
+    assert len(steps._known) <= MOST_STEPS

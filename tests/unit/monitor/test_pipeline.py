@@ -2,17 +2,20 @@
 
 from dataclasses import replace
 from functools import cache
+from pathlib import Path
 
 import numpy as np
 import pytest
 from watched_plate import PRODUCT, ROOM, T0, TICK_US, monitor, plate, tick, ticks_of
 
+from platewatch.compose import build_monitor, describe
 from platewatch.monitor import pipeline
 from platewatch.types import Action, AlarmState, FieldShot, Tick
 from sim_sensors.control import Stage
-from sim_sensors.simulation import Plant, Simulation
+from sim_sensors.simulation import Plant, Simulation, simulate
 
 SECOND = 1_000_000
+DEMO = Path(__file__).parents[3] / "config" / "demo-table.toml"
 STAGES = (
     Stage("ramp", to_degC=120.0, K_per_s=0.05),
     Stage("soak", lasts_s=np.inf),
@@ -58,6 +61,16 @@ def test_a_clean_heat_up_raises_no_alarm():
     assert all(o.peak is not None for o in outcomes)
     assert not state.blind
     assert outcomes[-1].peak.cause == "none"
+
+
+@pytest.mark.timeout(120)
+def test_the_demonstration_plate_heats_up_for_ten_minutes_without_an_alarm():
+    """config/demo-table.toml, clean batch, everything on as the daemon has it."""
+    description = describe(DEMO)
+    samples = simulate(Plant.of(description), "clean", until_s=600.0)
+    _, outcomes = run(ticks_of(samples), m=build_monitor(description))
+    assert len(outcomes) == 300
+    assert events(outcomes) == []
 
 
 def test_the_present_peak_is_the_true_one_within_its_band():
