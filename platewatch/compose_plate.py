@@ -8,11 +8,12 @@ from pathlib import Path
 
 from platewatch.adapters.settings import Description, load
 from platewatch.errors import SettingsError
+from platewatch.monitor.causes.layer import build_model
 from platewatch.monitor.estimator import build_quiet
 from platewatch.monitor.loops import build_loops
 from platewatch.monitor.peak import places, standard_draws
 from platewatch.monitor.pipeline import Monitor
-from platewatch.thermal.conduction import build_model
+from platewatch.thermal.conduction import build_model as build_thermal
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import reduce
 from platewatch.units import TemperatureUnit
@@ -43,11 +44,11 @@ def reference_degC(description: Description) -> float:
     return REFERENCE_DEGC if reference is None else reference
 
 
-def build_monitor(description: Description) -> Monitor:
-    """The estimator, forecast and alarms of one plate."""
+def build_monitor(description: Description, *, causes: bool = True) -> Monitor:
+    """The estimator, forecast and alarms of one plate; without `causes`, the filter alone."""
     plate = description.plate
     reference = reference_degC(description)
-    reduced = reduce(build_model(plate, build_grid(plate), reference))
+    reduced = reduce(build_thermal(plate, build_grid(plate), reference))
     quiet = build_quiet(plate, reduced, reference)
     limits = description.alarm_limits
     zones = tuple({limit.zone for limit in limits if limit.zone})
@@ -61,6 +62,9 @@ def build_monitor(description: Description) -> Monitor:
         estimator=description.estimator,
         forecast=description.forecast,
         unit=TemperatureUnit(description.unit),
+        causes=build_model(quiet, description.estimator.tick_us, description.causes)
+        if causes
+        else None,
     )
 
 

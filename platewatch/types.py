@@ -147,6 +147,16 @@ class LimitRow:
 
 
 @dataclass(frozen=True, slots=True)
+class CauseRow:
+    """One credible cause; place: the zones or thermocouples it is about."""
+
+    at_us: int
+    cause: str
+    place: str
+    probability: float
+
+
+@dataclass(frozen=True, slots=True)
 class AlarmEvent:
     """One change of state of one alarm (plate, alarm, subject)."""
 
@@ -200,8 +210,10 @@ class Outcome:
     peak: PeakRow | None = None
     zone_powers: tuple[ZonePowerRow, ...] = ()
     limits: tuple[LimitRow, ...] = ()
+    causes: tuple[CauseRow, ...] = ()
     alarm_events: tuple[AlarmEvent, ...] = ()
     shot: FieldShot | None = None
     gaps: tuple[Gap, ...] = ()
     notes: tuple[str, ...] = ()
+    question: str = ""  # the one open question, empty when there is none
     applied: tuple[int, ...] = field(default=())  # seq of the actions used in this tick

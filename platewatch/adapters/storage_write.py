@@ -14,6 +14,7 @@ from platewatch.adapters.storage_tables import (
     alarm_event,
     alarm_limit_probability,
     basis,
+    cause_probability,
     channel,
     field_shot,
     gap,
@@ -31,6 +32,7 @@ _READING = insert_sql(reading)
 _PEAK = insert_sql(peak)
 _POWER = insert_sql(zone_power)
 _LIMIT = insert_sql(alarm_limit_probability)
+_CAUSE = insert_sql(cause_probability)
 _BASIS = insert_sql(basis)
 _SHOT = insert_sql(field_shot)
 _APPLIED = insert_sql(action_applied)
@@ -84,6 +86,12 @@ def write_outcomes(
         for row in o.limits
     ]
     _insert(connection, _LIMIT, limits)
+    causes = [
+        (row.at_us, plate, row.cause, row.place, float(row.probability))
+        for o in outcomes
+        for row in o.causes
+    ]
+    _insert(connection, _CAUSE, causes)
     shots = [o.shot for o in outcomes if o.shot]
     _insert(connection, _BASIS, [(h, plate, description_sha256) for h in {s.basis for s in shots}])
     _insert(connection, _SHOT, [_shot_row(plate, shot) for shot in shots])

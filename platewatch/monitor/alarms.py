@@ -16,6 +16,8 @@ class Event(StrEnum):
     RAISE = "raise"
     CLEAR = "clear"
     ACKNOWLEDGE = "ack"
+    CLEAR_LATCHED = "clear latched"  # the condition cleared, but the alarm waits for a reset
+    RESET = "reset"
 
 
 TRANSITIONS: dict[tuple[AlarmState, Event], AlarmState] = {
@@ -25,6 +27,12 @@ TRANSITIONS: dict[tuple[AlarmState, Event], AlarmState] = {
     (AlarmState.ACKNOWLEDGED, Event.CLEAR): AlarmState.NORMAL,
     (AlarmState.RETURNED_UNACKNOWLEDGED, Event.RAISE): AlarmState.UNACKNOWLEDGED,
     (AlarmState.RETURNED_UNACKNOWLEDGED, Event.ACKNOWLEDGE): AlarmState.NORMAL,
+    (AlarmState.UNACKNOWLEDGED, Event.CLEAR_LATCHED): AlarmState.LATCHED_UNACKNOWLEDGED,
+    (AlarmState.ACKNOWLEDGED, Event.CLEAR_LATCHED): AlarmState.LATCHED_ACKNOWLEDGED,
+    (AlarmState.LATCHED_UNACKNOWLEDGED, Event.RAISE): AlarmState.UNACKNOWLEDGED,
+    (AlarmState.LATCHED_UNACKNOWLEDGED, Event.ACKNOWLEDGE): AlarmState.LATCHED_ACKNOWLEDGED,
+    (AlarmState.LATCHED_ACKNOWLEDGED, Event.RAISE): AlarmState.UNACKNOWLEDGED,
+    (AlarmState.LATCHED_ACKNOWLEDGED, Event.RESET): AlarmState.NORMAL,
 }
 
 ACTIVE = frozenset({AlarmState.UNACKNOWLEDGED, AlarmState.ACKNOWLEDGED})
@@ -61,6 +69,7 @@ class Condition:
     cause: str = ""
     on_delay_us: int = 0
     off_delay_us: int = 0
+    latch: bool = False
 
     @property
     def key(self) -> tuple[str, str]:
@@ -88,4 +97,5 @@ def judge(alarm: Alarm, condition: Condition, at_us: int) -> Alarm:
     delay = condition.off_delay_us if active else condition.on_delay_us
     if at_us - since < delay:
         return replace(alarm, since_us=since)
-    return Alarm(next_state(alarm.state, Event.CLEAR if active else Event.RAISE))
+    clear = Event.CLEAR_LATCHED if condition.latch else Event.CLEAR
+    return Alarm(next_state(alarm.state, clear if active else Event.RAISE))

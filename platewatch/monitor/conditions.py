@@ -73,6 +73,9 @@ class Estimate:
     p_over: float
     to_limit_s: tuple[float | None, float | None, float | None]
     settled: bool
+    p_averaged: float | None = None  # over all causes; else p_over is the only one
+    cause: str = "none"
+    explanation: str = ""
 
 
 def delays_us(limit: AlarmLimit) -> tuple[int, int]:
@@ -88,9 +91,14 @@ def delays_us(limit: AlarmLimit) -> tuple[int, int]:
 def peak_coming(words: Words, estimate: Estimate) -> Condition:
     """Will the limit be passed within the horizon?"""
     limit, p = estimate.limit, estimate.p_over
+    averaged = p if estimate.p_averaged is None else estimate.p_averaged
     on = COMING_ON_AVERAGED if estimate.settled else COMING_ON
     off = COMING_OFF_AVERAGED if estimate.settled else COMING_OFF
-    verdict = Verdict.ON if p >= on else Verdict.OFF if p < off else Verdict.BETWEEN
+    verdict = Verdict.BETWEEN
+    if p >= COMING_ON or averaged >= on:
+        verdict = Verdict.ON
+    elif p < COMING_OFF and averaged < off:
+        verdict = Verdict.OFF
     early, median, late = estimate.to_limit_s
     soon = median is not None and median < TOO_SHORT_S
     text = (
@@ -98,8 +106,8 @@ def peak_coming(words: Words, estimate: Estimate) -> Condition:
         f"(inferred; 95 % band {words.degrees(estimate.ahead_low_degC)} to "
         f"{words.degrees(estimate.ahead_high_degC)}) at {estimate.ahead_place}. "
         f"Alarm limit {limit.name} {words.degrees(limit.value)}: "
-        f"{_likelihood(p)} ({p:.0%}) to be passed{_when(words, early, median, late)}. "
-        f"{_ask(limit)}"
+        f"{likelihood(p)} ({p:.0%}) to be passed{_when(words, early, median, late)}. "
+        f"{_explained(estimate)}{_ask(limit)}"
     )
     if soon:
         text = f"{text} {TOO_SHORT_TEXT}"
@@ -115,12 +123,17 @@ def peak_coming(words: Words, estimate: Estimate) -> Condition:
         message=text,
         value=estimate.ahead_degC,
         limit_value=limit.value,
+        cause=estimate.cause,
         on_delay_us=on_us,
         off_delay_us=off_us,
     )
 
 
-def _likelihood(p: float) -> str:
+def _explained(estimate: Estimate) -> str:
+    return f"{estimate.explanation} " if estimate.explanation else ""
+
+
+def likelihood(p: float) -> str:
     """Words for a probability, as the design fixes them."""
     for least, word in ((0.90, "very likely"), (0.66, "likely"), (0.10, "possible")):
         if p >= least:
@@ -158,7 +171,7 @@ def peak_now(words: Words, estimate: Estimate) -> Condition:
         f"The hottest place may be over alarm limit {limit.name} {words.degrees(limit.value)} now: "
         f"{words.degrees(estimate.now_degC)} (inferred; 95 % band "
         f"{words.degrees(estimate.now_low_degC)} to {words.degrees(estimate.now_high_degC)}) "
-        f"at {estimate.now_place}. {_ask(limit)} {TOO_SHORT_TEXT}"
+        f"at {estimate.now_place}. {_explained(estimate)}{_ask(limit)} {TOO_SHORT_TEXT}"
     )
     return Condition(
         alarm="peak-now",

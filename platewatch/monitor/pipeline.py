@@ -11,7 +11,11 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from platewatch.monitor import conditions as ask
-from platewatch.monitor.alarms import ACTIVE, Alarm, Condition, Event, judge, next_state
+from platewatch.monitor import verdicts
+from platewatch.monitor.alarms import Alarm, Condition
+from platewatch.monitor.annunciate import apply_actions, apply_conditions
+from platewatch.monitor.causes import layer
+from platewatch.monitor.causes.views import View
 from platewatch.monitor.conditions import Estimate, Words
 from platewatch.monitor.estimator import (
     FORGET_AFTER_US,
@@ -24,28 +28,21 @@ from platewatch.monitor.estimator import (
     is_another_plate,
     restarted,
 )
-from platewatch.monitor.forecast import (
-    carry,
-    crossing_times,
-    horizon_times,
-    hottest_ahead,
-    quantile_times,
-    state_draws,
-)
+from platewatch.monitor.forecast import horizon_times
 from platewatch.monitor.inputs import Heard, nothing_heard, take_in
 from platewatch.monitor.limits import AlarmLimit, LimitKind
 from platewatch.monitor.loops import Loops, LoopStart, set_points_ahead
 from platewatch.monitor.options import EstimatorOptions, ForecastOptions
-from platewatch.monitor.peak import WHOLE_PLATE, Hottest, Places, hottest_now, probability_over
+from platewatch.monitor.outlook import Ahead, Means, Prospect, look_ahead, now_of, present, worst_of
+from platewatch.monitor.peak import WHOLE_PLATE, Hottest, Places
 from platewatch.monitor.recipe import Recipe
+from platewatch.monitor.shots import field_of, shot_of
 from platewatch.types import (
-    Action,
-    AlarmEvent,
     AlarmState,
     Array,
+    CauseRow,
     FieldShot,
     Gap,
-    Gaussian,
     LimitRow,
     Outcome,
     PeakRow,
@@ -59,7 +56,7 @@ SHOT_EVERY_US = 60_000_000
 SETTLED_SD_K = 3.0  # the present peak is known this well once the filter has found its feet
 SETTLED_AFTER_US = 600_000_000
 NEAR_LIMIT_K = 20.0
-CAUSE_NONE = "none"
+CAUSES_EVERY_US = 10_000_000
 
 
 @dataclass(frozen=True)
@@ -75,10 +72,18 @@ class Monitor:
     estimator: EstimatorOptions
     forecast: ForecastOptions
     unit: TemperatureUnit
+    causes: layer.Model | None = None
 
     @property
     def words(self) -> Words:
         return Words(self.quiet.plate, self.unit)
+
+    @property
+    def means(self) -> Means:
+        """What looking ahead needs."""
+        return Means(
+            self.quiet, self.loops, self.where, self.draws, self.peak_limits, self.forecast
+        )
 
     @property
     def peak_limits(self) -> tuple[AlarmLimit, ...]:
@@ -89,15 +94,6 @@ class Monitor:
         """The lowest enabled peak limit, which peak rows refer to."""
         alarming = [limit for limit in self.peak_limits if not limit.record_only]
         return min(alarming or self.peak_limits, key=lambda limit: limit.value, default=None)
-
-
-@dataclass(frozen=True)
-class Ahead:
-    """The last forecast: by region the coming peak, by limit its passing."""
-
-    at_us: int
-    hottest: Mapping[str, Hottest]
-    passing: Mapping[str, tuple[float, tuple[float | None, float | None, float | None]]]
 
 
 @dataclass(frozen=True)
@@ -115,6 +111,9 @@ class State:
     shot_us: int = 0
     power_us: int = 0
     integral: Array | None = None  # (nz,) of the controllers, nan where not known
+    causes: layer.State | None = None
+    causes_us: int = 0
+    question: str = ""
 
 
 def first(monitor: Monitor) -> State:
@@ -127,23 +126,16 @@ def resume(
 ) -> State:
     """After a restart: the last stored field, if it fits the description, and the alarms."""
     state = replace(first(monitor), alarms={key: Alarm(s) for key, s in alarms.items()})
-    quiet = monitor.quiet
-    if shot is None or shot.basis != quiet.reduced.basis_hash:
+    kept = field_of(monitor.quiet, shot)
+    if kept is None:
         return state
-    nz, nu = len(quiet.zone_u), len(quiet.around_u)
-    if shot.mean.size != quiet.blocks.size or shot.drive.size != 3 * nz + nu + 1:
-        return state
-    heater, called, duty, around, rest = np.split(shot.drive, [nz, 2 * nz, 3 * nz, 3 * nz + nu])
-    field_state = FieldState(
-        shot.at_us, Gaussian(shot.mean, shot.cov), heater, called, around, float(rest[0])
-    )
-    heard = replace(state.heard, around=around, duty=duty)
+    picture, duty = kept
     return replace(
         state,
-        picture=field_state,
-        heard=heard,
-        started_us=shot.at_us,
-        silent_since_us=shot.at_us,
+        picture=picture,
+        heard=replace(state.heard, around=picture.around, duty=duty),
+        started_us=picture.at_us,
+        silent_since_us=picture.at_us,
         settled=True,
     )
 
@@ -153,32 +145,38 @@ def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
     heard, seen = take_in(monitor.quiet, state.heard, tick, monitor.unit)
     state = replace(state, heard=heard, integral=_controllers(monitor, state, heard, tick))
     if state.picture is None and not seen.sensors:
-        alarms, events = _acknowledge(monitor, state.alarms, tick)
+        alarms, events = apply_actions(state.alarms, tick)
         return replace(state, alarms=alarms), Outcome(
             tick.at_us, alarm_events=events, applied=tuple(a.seq for a in tick.actions)
         )
+    before = state.picture
     state, gaps = _see(monitor, state, tick, seen)
+    state = _attend(monitor, state, before, tick, seen)
     assert state.picture is not None
-    now = _now(monitor, state.picture)
-    state = _settle(state, tick, now[WHOLE_PLATE])
+    fresh = present(monitor.means, state.picture.belief)
+    state = _settle(state, tick, fresh[WHOLE_PLATE])
     if _forecast_due(monitor, state, tick):
-        state = replace(state, ahead=_look_ahead(monitor, state, tick))
-    limit_rows = _limit_rows(monitor, state, tick)
-    alarms, acknowledged = _acknowledge(monitor, state.alarms, tick)
+        state = _look(monitor, state)
+    assert state.ahead is not None
+    now = now_of(state.ahead, fresh)
+    alarms, acknowledged = apply_actions(state.alarms, tick)
     found = [] if tick.backlog else _conditions(monitor, state, tick, now)
-    alarms, raised = _judge(alarms, found, tick)
+    alarms, raised = apply_conditions(alarms, found, tick)
     state = replace(state, alarms=alarms)
     events = acknowledged + raised
     state, shot = _shot(monitor, state, tick, bool(events))
     state, powers = _powers(monitor, state, tick)
+    state, causes = _causes(monitor, state, tick)
     return state, Outcome(
         at_us=tick.at_us,
         peak=_peak_row(monitor, state, tick, now[WHOLE_PLATE]),
         zone_powers=powers,
-        limits=limit_rows,
+        limits=_limit_rows(monitor, state, tick),
+        causes=causes,
         alarm_events=events,
         shot=shot,
         gaps=gaps,
+        question=state.question,
         applied=tuple(a.seq for a in tick.actions),
     )
 
@@ -221,13 +219,6 @@ def _begun(monitor: Monitor, state: State, tick: Tick, seen: Observed) -> State:
 def _blind_after_us(state: State) -> int:
     known = [interval for interval in state.heard.interval_us if interval]
     return ask.blind_after_us(min(known, default=0))
-
-
-def _now(monitor: Monitor, field_state: FieldState) -> dict[str, Hottest]:
-    return {
-        region: hottest_now(monitor.quiet, monitor.where, field_state.belief, monitor.draws, region)
-        for region in monitor.where.regions
-    }
 
 
 def _settle(state: State, tick: Tick, now: Hottest) -> State:
@@ -277,22 +268,47 @@ def loop_start(monitor: Monitor, state: State) -> LoopStart:
     )
 
 
-def _look_ahead(monitor: Monitor, state: State, tick: Tick) -> Ahead:
-    """Carry the present belief over the horizon and hold it against every peak limit."""
+def _attend(
+    monitor: Monitor, state: State, before: FieldState | None, tick: Tick, seen: Observed
+) -> State:
+    """Let the bank of causes watch this tick, once the filter has found its feet."""
+    model = monitor.causes
+    if model is None or before is None or not state.settled:
+        return state
+    if tick.at_us - state.started_us < layer.WARM_UP_US:
+        return state
+    causes = state.causes or layer.State(tuple(range(len(monitor.quiet.plate.sensors))))
+    causes = layer.take_evidence(model, causes, tick)
+    if not seen.sensors:
+        return replace(state, causes=layer.State(causes.sensors, answer=causes.answer))
+    dt_us = tick.at_us - before.at_us
+    return replace(state, causes=layer.attend(model, causes, before, dt_us, seen))
+
+
+def _look(monitor: Monitor, state: State) -> State:
+    """Explain what does not fit, and carry every credible explanation over the horizon."""
     assert state.picture is not None
-    quiet, where = monitor.quiet, monitor.where
-    X = state_draws(state.picture, monitor.draws)
-    path = carry(
-        quiet, state.picture, monitor.loops, loop_start(monitor, state), X, monitor.forecast
+    causes, p_none = state.causes, 1.0
+    views: tuple[View, ...] = ()
+    if monitor.causes is not None and causes is not None:
+        times = horizon_times(monitor.forecast)
+        causes = layer.explain(monitor.causes, causes, state.picture, times)
+        views, p_none = causes.views, causes.p_none
+    ahead = look_ahead(monitor.means, state.picture, loop_start(monitor, state), views, p_none)
+    question = verdicts.question(monitor.words, ahead.prospects)
+    return replace(state, causes=causes, ahead=ahead, question=question)
+
+
+def _causes(monitor: Monitor, state: State, tick: Tick) -> tuple[State, tuple[CauseRow, ...]]:
+    """Every credible cause, every 10 s and when the leading one changes."""
+    if state.ahead is None or state.ahead.at_us != tick.at_us:
+        return state, ()
+    if tick.at_us - state.causes_us < CAUSES_EVERY_US:
+        return state, ()
+    rows = tuple(
+        CauseRow(tick.at_us, p.name, p.subjects, p.probability) for p in state.ahead.prospects
     )
-    regions = {r: hottest_ahead(quiet, where, path, r) for r in where.regions}
-    passing = {}
-    for limit in monitor.peak_limits:
-        hottest, tops = regions[limit.zone]
-        times = crossing_times(path.times_s, tops, limit.value)
-        p = probability_over(hottest.samples, limit.value)
-        passing[limit.name] = (p, quantile_times(times))
-    return Ahead(tick.at_us, {r: h for r, (h, _) in regions.items()}, passing)
+    return replace(state, causes_us=tick.at_us), rows
 
 
 def _limit_rows(monitor: Monitor, state: State, tick: Tick) -> tuple[LimitRow, ...]:
@@ -319,6 +335,9 @@ def _conditions(
         if not limit.record_only:
             estimate = _estimate(monitor, state, limit, now[limit.zone])
             found += [ask.peak_coming(words, estimate), ask.peak_now(words, estimate)]
+    standing = frozenset(state.alarms)
+    found += verdicts.zone_alarms(words, state.ahead.prospects, standing)
+    found += verdicts.sensor_alarms(words, state.ahead.prospects, standing)
     for limit in ask.sensor_limits(monitor.limits):
         for i, sensor in enumerate(monitor.quiet.plate.sensors):
             fresh = tick.at_us - state.heard.sensor_us[i] <= after_us
@@ -332,9 +351,11 @@ def _conditions(
 
 
 def _estimate(monitor: Monitor, state: State, limit: AlarmLimit, now: Hottest) -> Estimate:
+    """One limit against the worst credible prospect."""
     assert state.ahead is not None
-    ahead = state.ahead.hottest[limit.zone]
-    p, to_limit = state.ahead.passing[limit.name]
+    prospects = state.ahead.prospects
+    worst = worst_of(prospects, limit.name)
+    ahead, (p, to_limit) = worst.ahead[limit.zone], worst.passing[limit.name]
     return Estimate(
         limit=limit,
         now_degC=now.degC,
@@ -347,91 +368,22 @@ def _estimate(monitor: Monitor, state: State, limit: AlarmLimit, now: Hottest) -
         ahead_high_degC=ahead.quantile(ask.UPPER),
         ahead_place=monitor.words.place(*_place(monitor.quiet, ahead.cell)),
         p_over=p,
+        p_averaged=state.ahead.passing[limit.name][0],
         to_limit_s=to_limit,
         settled=state.settled,
+        cause=_leading(worst, prospects),
+        explanation=verdicts.explanation(monitor.words, prospects),
     )
+
+
+def _leading(worst: Prospect, prospects: tuple[Prospect, ...]) -> str:
+    return worst.name if worst is prospects[0] else f"{prospects[0].name}; worst: {worst.name}"
 
 
 def _place(quiet: Quiet, cell: int) -> tuple[str, float, float]:
     """Zone and centre of a cell, mm."""
     grid = quiet.grid
     return quiet.cell_zone[cell], float(grid.x[cell] * 1e3), float(grid.y[cell] * 1e3)
-
-
-def _acknowledge(
-    monitor: Monitor, alarms: Mapping[tuple[str, str], Alarm], tick: Tick
-) -> tuple[dict[tuple[str, str], Alarm], tuple[AlarmEvent, ...]]:
-    """Apply what people asked for, in the order they asked."""
-    moved = dict(alarms)
-    events = []
-    for action in tick.actions:
-        for key in [k for k in moved if _meant(action, k)]:
-            alarm = moved[key]
-            state = next_state(alarm.state, Event(action.verb))
-            if state is not alarm.state:
-                moved[key] = replace(alarm, state=state)
-                events.append(_by_person(action, key, alarm.state, state, tick))
-    return moved, tuple(events)
-
-
-def _meant(action: Action, key: tuple[str, str]) -> bool:
-    alarm, subject = key
-    return (
-        action.verb in set(Event) - {Event.RAISE, Event.CLEAR}
-        and action.alarm == alarm
-        and action.subject in ("", subject)
-    )
-
-
-def _by_person(
-    action: Action, key: tuple[str, str], before: AlarmState, after: AlarmState, tick: Tick
-) -> AlarmEvent:
-    return AlarmEvent(
-        at_us=tick.at_us,
-        alarm=key[0],
-        subject=key[1],
-        place="",
-        from_state=before,
-        to_state=after,
-        priority="",
-        value=None,
-        limit_value=None,
-        cause="",
-        message=f"acknowledged by {action.person}",
-        person=action.person,
-        reason=action.reason,
-    )
-
-
-def _judge(
-    alarms: dict[tuple[str, str], Alarm], found: list[Condition], tick: Tick
-) -> tuple[dict[tuple[str, str], Alarm], tuple[AlarmEvent, ...]]:
-    """Move every alarm by its condition."""
-    events = []
-    for condition in found:
-        before = alarms.get(condition.key, Alarm())
-        after = judge(before, condition, tick.at_us)
-        if after is not before:
-            alarms[condition.key] = after
-        if after.state is not before.state:
-            events.append(_changed(condition, before.state, after.state, tick))
-    return alarms, tuple(events)
-
-
-def _changed(condition: Condition, before: AlarmState, after: AlarmState, tick: Tick) -> AlarmEvent:
-    return AlarmEvent(
-        at_us=tick.at_us,
-        alarm=condition.alarm,
-        subject=condition.subject,
-        place=condition.place,
-        from_state=before,
-        to_state=after,
-        priority=condition.priority,
-        value=condition.value,
-        limit_value=condition.limit_value,
-        cause=condition.cause,
-        message=condition.message if after in ACTIVE else "returned to normal",
-    )
 
 
 def _shot(
@@ -441,10 +393,7 @@ def _shot(
     if not asked and tick.at_us - state.shot_us < SHOT_EVERY_US:
         return state, None
     assert state.picture is not None
-    f = state.picture
-    drive = np.concatenate((f.heater_W, f.called_W, state.heard.duty, f.around, [f.misfit]))
-    basis = monitor.quiet.reduced.basis_hash
-    shot = FieldShot(tick.at_us, basis, f.belief.mean, f.belief.cov, drive)
+    shot = shot_of(monitor.quiet, state.picture, state.heard.duty)
     return replace(state, shot_us=tick.at_us), shot
 
 
@@ -487,5 +436,5 @@ def _peak_row(monitor: Monitor, state: State, tick: Tick, now: Hottest) -> PeakR
         limit_degC=limit.value if limit else None,
         p_over=p,
         to_limit_s=to_limit[1],
-        cause=CAUSE_NONE,
+        cause=state.ahead.leading.name,
     )

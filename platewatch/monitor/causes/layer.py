@@ -34,7 +34,7 @@ from platewatch.monitor.causes.views import View, build_views
 from platewatch.monitor.estimator import FieldState, Observed, Quiet, sensitivities
 from platewatch.monitor.options import CauseOptions
 from platewatch.thermal.grid import point_row
-from platewatch.types import Array
+from platewatch.types import Array, Tick
 
 WARM_UP_US = 120_000_000  # the quiet filter finds its feet before the bank listens
 SUSPECT_LOG_ODDS = -2.0  # below this nothing is looked at twice
@@ -47,6 +47,8 @@ LEFT_SHARE = 0.03
 LEFT_LEAST = 60.0
 DOUBT = 8.0
 OPEN_FLOOR = 0.1
+RELIABILITY = 0.95  # of an answer
+ANSWERS = {("answer", "yes"): 1.0, ("answer", "no"): -1.0, ("answer", "withdraw"): 0.0}
 SETTLE_S = 900.0
 SUSPECT_CAUSES = (Cause.SENSOR_LOOSE, Cause.SENSOR_DRIFT)
 Parts = tuple[tuple[Cause, str], ...]
@@ -87,6 +89,7 @@ class State:
 
     sensors: those it listens to;  seen (ticks, m): whitened innovations, newest last
     p_none: probability that nothing is the matter;  views: every credible cause
+    answer: +1 a load was put on, -1 none was, 0 nobody said
     """
 
     sensors: tuple[int, ...]
@@ -94,12 +97,24 @@ class State:
     seen: Array | None = None
     p_none: float = 1.0
     views: tuple[View, ...] = ()
+    answer: float = 0.0
+
+
+def take_evidence(model: Model, state: State, tick: Tick) -> State:
+    """A person's answer or a load event: evidence for or against a load, not a verdict."""
+    answer = state.answer
+    for action in tick.actions:
+        answer = ANSWERS.get((action.verb, action.subject), answer)
+    for event in tick.events:
+        if event.event == "load-on":
+            answer = 1.0
+    return replace(state, answer=answer)
 
 
 def attend(model: Model, state: State, before: FieldState, dt_us: int, seen: Observed) -> State:
     """One tick.  before: the quiet filter's state at its start; seen: its readings."""
     if dt_us != model.tick_us:
-        return State(state.sensors)
+        return State(state.sensors, answer=state.answer)
     quiet = model.quiet
     sentinel, bank = model.of(state.sensors)
     n = len(sentinel.F)
@@ -141,6 +156,8 @@ def explain(model: Model, state: State, field_state: FieldState, times_s: Array)
         return replace(state, p_none=1.0, views=())
     fits = second_look(model, bank, found, state.seen)
     pairs = open_pairs(fits, bank, round(SETTLE_S / model.tick_s))
+    said = state.answer * np.log(RELIABILITY / (1 - RELIABILITY)) / 2
+    fits = [replace(f, log_prior=f.log_prior + said * _says_load(f)) for f in fits]
     probabilities, p_none = weigh(fits, pairs)
     order = np.argsort(-probabilities)[:SHOWN]
     kept = [i for i in order if probabilities[i] >= CREDIBLE]
@@ -156,6 +173,15 @@ def explain(model: Model, state: State, field_state: FieldState, times_s: Array)
         times_s,
     )
     return replace(state, p_none=p_none, views=views)
+
+
+def _says_load(f: Fit) -> float:
+    """+1 for a load alone, -1 for a thermocouple fault alone, else 0."""
+    if len(f.parts) > 1:
+        return 0.0
+    if f.cause is Cause.COLD_LOAD:
+        return 1.0
+    return -1.0 if FAMILY_OF[f.cause] is Family.SENSOR else 0.0
 
 
 def second_look(model: Model, bank: Bank, found: list[Finding], seen: Array) -> list[Fit]:

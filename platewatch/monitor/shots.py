@@ -1,0 +1,27 @@
+"""The estimator's state as one stored value, and back."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from platewatch.monitor.estimator import FieldState, Quiet
+from platewatch.types import Array, FieldShot, Gaussian
+
+
+def shot_of(quiet: Quiet, field: FieldState, duty: Array) -> FieldShot:
+    """Field, heaters and surroundings; duty (nz,) as last heard."""
+    drive = np.concatenate((field.heater_W, field.called_W, duty, field.around, [field.misfit]))
+    basis = quiet.reduced.basis_hash
+    return FieldShot(field.at_us, basis, field.belief.mean, field.belief.cov, drive)
+
+
+def field_of(quiet: Quiet, shot: FieldShot | None) -> tuple[FieldState, Array] | None:
+    """Field and duties of a shot; None where it belongs to another description."""
+    if shot is None or shot.basis != quiet.reduced.basis_hash:
+        return None
+    nz, nu = len(quiet.zone_u), len(quiet.around_u)
+    if shot.mean.size != quiet.blocks.size or shot.drive.size != 3 * nz + nu + 1:
+        return None
+    heater, called, duty, around, rest = np.split(shot.drive, [nz, 2 * nz, 3 * nz, 3 * nz + nu])
+    belief = Gaussian(shot.mean, shot.cov)
+    return FieldState(shot.at_us, belief, heater, called, around, float(rest[0])), duty
