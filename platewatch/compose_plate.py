@@ -11,6 +11,7 @@ from platewatch.errors import SettingsError
 from platewatch.monitor.causes.layer import build_model
 from platewatch.monitor.estimator import build_quiet
 from platewatch.monitor.loops import build_loops
+from platewatch.monitor.options import CAUSE_NAMES
 from platewatch.monitor.peak import places, standard_draws
 from platewatch.monitor.pipeline import Monitor
 from platewatch.thermal.conduction import build_model as build_thermal
@@ -45,7 +46,11 @@ def reference_degC(description: Description) -> float:
 
 
 def build_monitor(description: Description, *, causes: bool = True) -> Monitor:
-    """The estimator, forecast and alarms of one plate; without `causes`, the filter alone."""
+    """The estimator, forecast and alarms of one plate; without `causes`, the filter alone.
+
+    So, too, where the description turns every cause off.
+    """
+    causes = causes and not set(CAUSE_NAMES) <= set(description.causes.off)
     plate = description.plate
     reference = reference_degC(description)
     reduced = reduce(build_thermal(plate, build_grid(plate), reference))
