@@ -7,9 +7,11 @@ not fit is left to be explained, not absorbed.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 import shapely
+from numpy.typing import NDArray
 
 from platewatch.monitor.kalman import Coupling, Innovation, predict_coupled, update
 from platewatch.monitor.tolerance import tolerance_K
@@ -85,10 +87,16 @@ class Quiet:
 
     def inputs(self, zone_W: Array, around: Array) -> Array:
         """The model's input vector (m,) from zone watts and surrounding temperatures."""
+        powers, temperatures = self._places_of_inputs
         u = np.zeros(len(self.reduced.inputs))
-        u[list(self.zone_u)] = zone_W
-        u[list(self.around_u)] = around
+        u[powers] = zone_W
+        u[temperatures] = around
         return u
+
+    @cached_property
+    def _places_of_inputs(self) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+        powers, temperatures = self.zone_u, self.around_u
+        return np.array(powers, dtype=np.int64), np.array(temperatures, dtype=np.int64)
 
     def steps_for(self, heard: bool) -> Steps:
         """Exact steps; where duty is not on the bus, heater power is far less certain."""

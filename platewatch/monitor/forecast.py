@@ -184,14 +184,19 @@ def hottest_ahead(
     """
     place, N = where.regions[region], path.modes.shape[2]
     means = path.modes @ np.full(N, 1 / N)
-    fields = means @ place.rows.T
+    spread = np.ascontiguousarray(
+        (path.modes - means[:, :, None]).astype(np.float32).transpose(0, 2, 1)
+    )
+    fields = means.astype(np.float32) @ place.short_rows.T
     if missed is not None:
-        fields = fields + missed[place.cells]
-    spread = path.modes - means[:, :, None]
-    hottest = place.rows[fields.argmax(axis=1)]
-    margins = MARGIN_SD * np.matmul(hottest[:, None, :], spread)[:, 0, :].std(axis=1) + 0.1
+        fields += missed[place.cells].astype(np.float32)
+    hottest = place.short_rows[fields.argmax(axis=1)]
+    margins = MARGIN_SD * np.matmul(spread, hottest[:, :, None])[:, :, 0].std(axis=1) + 0.1
     found = candidates(place, fields, margins)
-    base, values = values_of(place, found, fields, spread)
+    exact = means @ place.rows[found].T
+    if missed is not None:
+        exact += missed[place.cells[found]]
+    base, values = values_of(place, found, exact, spread)
     tops = values.max(axis=2)
     when = tops.argmax(axis=0)
     draw = np.arange(N)

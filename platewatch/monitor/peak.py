@@ -25,6 +25,7 @@ DRAWS = 256
 SEED = 18_221_807  # any constant: the draws must never change
 BLOCK_CELLS = 4  # candidates are the hottest cell of each 4 x 4 block
 MARGIN_SD = 6.0
+TIE_K = 1e-4
 WHOLE_PLATE = ""
 
 NDArrayInt = NDArray[np.int64]
@@ -104,33 +105,32 @@ def _region(quiet: Quiet, key: NDArrayInt, members: NDArrayInt) -> Region:
     return Region(cells, rows, rows.astype(np.float32), starts, sizes)
 
 
-def candidates(region: Region, fields: Array, margin_K: Array) -> NDArrayInt:
+def candidates(region: Region, fields: Short, margin_K: Array) -> NDArrayInt:
     """Positions in `region.cells` of what may hold the maximum of some field: the hottest
     cell of each block, where it comes within the margin of the hottest of all.
 
     fields (looks, m): mean temperatures of the region's cells;  margin_K (looks,)
+    Cells as hot as the hottest of their block to TIE_K all count, so that rounding does
+    not choose between them.
     """
     hottest = np.maximum.reduceat(fields, region.starts, axis=1)
     least = (hottest.max(axis=1) - margin_K)[:, None]
-    bar = np.where(hottest >= least, hottest, np.inf)
+    bar = np.where(hottest >= least, hottest - TIE_K, np.inf).astype(np.float32)
     found = (fields >= np.repeat(bar, region.sizes, axis=1)).any(axis=0)
     return np.flatnonzero(found)
 
 
 def values_of(
-    region: Region, found: NDArrayInt, fields: Array, spread: Array
+    region: Region, found: NDArrayInt, fields: Array, spread: Short
 ) -> tuple[float, Short]:
     """Temperatures of some cells in every draw: a base, and (looks, draws, cells) above it.
 
-    fields (looks, m): mean temperatures of the region's cells;  spread (looks, r, draws):
-    modes beyond their mean
+    fields (looks, cells): their mean temperatures;  spread (looks, draws, r): modes
+    beyond their mean, draws in rows so that maxima are sought along memory
     Single precision serves for differences to the hottest: near it they round to 1e-6 K.
     """
-    fields = fields[:, found]
     base = float(fields.max())
-    # Draws in rows: maxima are then sought along memory.
-    short = np.ascontiguousarray(spread.astype(np.float32).transpose(0, 2, 1))
-    values = np.matmul(short, np.ascontiguousarray(region.short_rows[found].T))
+    values = np.matmul(spread, np.ascontiguousarray(region.short_rows[found].T))
     values += (fields - base).astype(np.float32)[:, None, :]
     return base, values
 
@@ -185,14 +185,18 @@ def hottest_now(
     missed (cells,): K to add to the field, what its modes cannot show
     """
     k, place = quiet.blocks.a, where.regions[region]
-    spread = square_root(belief.cov[k, k]) @ Z[k]
+    root = square_root(belief.cov[k, k]).astype(np.float32)
+    spread = Z[k].T.astype(np.float32) @ root.T
     mean = belief.mean[k]
-    field = place.rows @ mean
+    field = place.short_rows @ mean.astype(np.float32)
     if missed is not None:
-        field = field + missed[place.cells]
-    margin = MARGIN_SD * float((place.rows[field.argmax()] @ spread).std()) + 0.1
+        field += missed[place.cells].astype(np.float32)
+    margin = MARGIN_SD * float((spread @ place.short_rows[field.argmax()]).std()) + 0.1
     found = candidates(place, field[None], np.array([margin]))
-    base, values = values_of(place, found, field[None], spread[None])
+    exact = place.rows[found] @ mean
+    if missed is not None:
+        exact += missed[place.cells[found]]
+    base, values = values_of(place, found, exact[None], spread[None])
     best = values[0].argmax(axis=1)
     samples = base + values[0, np.arange(best.size), best].astype(np.float64)
     return Hottest(samples, most_common(place.cells[found[best]]))

@@ -105,7 +105,7 @@ def test_a_zone_has_a_hottest_place_of_its_own():
 def test_a_colder_block_is_left_out_and_a_near_one_kept():
     """Candidates are the hottest cell of each block within the margin."""
     region = monitor().where.regions[WHOLE_PLATE]
-    field = np.linspace(100.0, 101.0, region.cells.size)[None].copy()
+    field = np.linspace(100.0, 101.0, region.cells.size, dtype=np.float32)[None]
     field[0, 7] = 110.0
     assert candidates(region, field, np.array([5.0])).tolist() == [7]
     assert candidates(region, field, np.array([15.0])).size == region.starts.size
@@ -114,9 +114,17 @@ def test_a_colder_block_is_left_out_and_a_near_one_kept():
 def test_candidates_of_several_looks_are_those_of_each():
     """A look at a cold plate does not lose the hot place of another."""
     region = monitor().where.regions[WHOLE_PLATE]
-    fields = np.full((2, region.cells.size), 100.0)
+    fields = np.full((2, region.cells.size), 100.0, dtype=np.float32)
     fields[0, 7], fields[1, 450] = 110.0, 105.0
     assert candidates(region, fields, np.array([5.0, 4.0])).tolist() == [7, 450]
+
+
+def test_cells_equally_hot_are_candidates_together():
+    """Rounding does not choose between mirrored cells: 1e-5 K apart, both count."""
+    region = monitor().where.regions[WHOLE_PLATE]
+    field = np.full((1, region.cells.size), 100.0, dtype=np.float32)
+    field[0, 2], field[0, 3] = 110.0, 110.0 - 2e-5
+    assert candidates(region, field, np.array([5.0])).tolist() == [2, 3]
 
 
 @pytest.mark.parametrize("zone", [WHOLE_PLATE, "L"])
