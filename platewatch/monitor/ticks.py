@@ -24,6 +24,7 @@ from platewatch.types import Action, BatchEvent, Flag, Reading, Tick
 
 GAP_US = 600_000_000  # empty ticks are made one by one for this long, then as one
 GRACE_US = 10_000_000  # after a broken bus is back, before the clock closes ticks again
+SPEAKS_US = 60_000_000  # a channel that arrived within this has a say in how far time has come
 
 
 class Ticker:
@@ -57,6 +58,8 @@ class Ticker:
         self._closed = closed_us
         self._last_data = 0
         self._newest: int | None = None
+        self._furthest: int | None = None
+        self._latest: dict[str, tuple[int, int]] = {}  # channel: newest stamp, its arrival
         self._quiet_since: int | None = None
         self._not_before: int | None = None
         self._actions: list[tuple[int | None, Action]] = []
@@ -69,7 +72,12 @@ class Ticker:
 
     @property
     def newest_us(self) -> int | None:
-        """The newest stamp of a usable reading."""
+        """The stamp that most thermocouples have reached.
+
+        One source whose clock is ahead must not close every tick before the others
+        were heard: more than half of the sensors that spoke within SPEAKS_US of arrival
+        have to be there (of all channels, while no sensor speaks).
+        """
         return self._newest
 
     def add(self, reading: Reading) -> Reading:
@@ -87,9 +95,7 @@ class Ticker:
             return replace(reading, flags=reading.flags | Flag.MAYBE_DUPLICATE)
         open_tick[key] = reading
         if reading.usable:
-            self._quiet_since = None
-            if self._newest is None or reading.at_us > self._newest:
-                self._newest = reading.at_us
+            self._heard(reading)
         return reading
 
     def add_event(self, event: BatchEvent) -> BatchEvent:
@@ -111,8 +117,8 @@ class Ticker:
     def close(self, now_us: int | None = None) -> list[Tick]:
         """The ticks that may close now, in order.
 
-        By stamps: the newest one is at or past tick + late_us.  By the clock, in a
-        silence: `now_us` has run on by that much since the newest reading was in, at
+        By stamps: `newest_us` is at or past tick + late_us.  By the clock, in a
+        silence: `now_us` has run on by that much since `newest_us` moved, at
         most GAP_US beyond the last tick with a reading.  Only differences of `now_us`
         count, so a clock that disagrees with the sources does no harm; give a steady
         one (`Clock.monotonic`), for a step of it would count as silence.
@@ -140,8 +146,43 @@ class Ticker:
         """
         if until_us is not None:
             return self._close_up_to(until_us, until_us)
-        last = None if self._newest is None else self._tick_of(self._newest)
+        last = None if self._furthest is None else self._tick_of(self._furthest)
         return self._close_up_to(last, None)
+
+    def finish_live(self) -> list[Tick]:
+        """Close what most thermocouples have reached, at an orderly stop.
+
+        What one source has stamped further ahead stays for the next run.
+        """
+        if self._newest is None:
+            return []
+        until_us = self._tick_of(self._newest)
+        return self._close_up_to(until_us, until_us)
+
+    def _heard(self, reading: Reading) -> None:
+        """How far time has come, after one more usable reading."""
+        at_us, seen_us = reading.at_us, reading.seen_us
+        self._furthest = at_us if self._furthest is None else max(at_us, self._furthest)
+        known = self._latest.get(reading.channel)
+        self._latest[reading.channel] = (max(at_us, known[0]) if known else at_us, seen_us)
+        if self.started and self._newest is not None and at_us <= self._newest:
+            return
+        reached = self._reached(seen_us)
+        # Before the first tick the next sensor may show that the first one was ahead.
+        if self._newest is None or reached > self._newest or not self.started:
+            self._newest = reached
+            self._quiet_since = None
+
+    def _reached(self, seen_us: int) -> int:
+        """The stamp that more than half of the sensors, else of all channels, have reached."""
+        speaking = [
+            (channel, at_us)
+            for channel, (at_us, arrived_us) in self._latest.items()
+            if abs(seen_us - arrived_us) <= SPEAKS_US
+        ]
+        stamps = [at_us for channel, at_us in speaking if channel.startswith("sensor/")]
+        stamps = sorted(stamps or (at_us for _, at_us in speaking), reverse=True)
+        return stamps[len(stamps) // 2]
 
     def _tick_of(self, at_us: int) -> int:
         return -(-at_us // self.tick_us) * self.tick_us

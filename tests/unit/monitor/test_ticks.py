@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import pytest
 
 from platewatch.monitor.ticks import GAP_US, GRACE_US, Ticker
@@ -251,3 +253,68 @@ def test_impossible_times_are_refused(wrong: tuple[int, int, dict[str, int]]) ->
     tick_us, late_us, more = wrong
     with pytest.raises(ValueError, match="must be positive"):
         Ticker(tick_us, late_us, **more)
+
+
+def seen(at_s: float, name: str, ahead_s: float = 0.0) -> Reading:
+    """A reading that arrives at `at_s`, stamped by a clock that is ahead."""
+    at_us = START + round(at_s * S)
+    return Reading(at_us + round(ahead_s * S), f"sensor/{name}", 1.0, at_us)
+
+
+def test_one_source_that_is_ahead_closes_no_tick_before_the_others_were_heard() -> None:
+    """A clock up to 120 s ahead is within bounds; the other thermocouples must not be late."""
+    ticker = Ticker(TICK, LATE)
+    for n in range(120):
+        ticker.add(seen(n + 0.1, "T9", ahead_s=90))
+        for name in ("T1", "T2", "T3"):
+            ticker.add(seen(n + 0.2, name))
+        ticker.close(now_us=START + n * S)
+    assert ticker.late == 0
+    assert ticker.closed_us is not None
+    assert 112 <= (ticker.closed_us - START) / S <= 120
+
+
+def test_the_reading_of_a_source_that_is_ahead_is_used_in_its_own_tick() -> None:
+    """It is no backlog and not late: its tick has simply not come yet."""
+    ticker = Ticker(TICK, LATE)
+    used = set()
+    for n in range(60):
+        ticker.add(seen(n, "T9", ahead_s=20))
+        for name in ("T1", "T2"):
+            ticker.add(seen(n, name))
+        for tick in ticker.close(now_us=START + n * S):
+            used |= {(r.at_us - START) // S for r in tick.readings if r.channel == "sensor/T9"}
+    assert used >= set(range(20, 56))
+
+
+def test_duties_that_are_ahead_close_nothing_while_thermocouples_speak() -> None:
+    """The controller's clock may be off; only thermocouples say how far time has come."""
+    ticker = running(0)
+    for n in range(1, 30):
+        ticker.add(replace(seen(n, "", ahead_s=100), channel="zone/Z1/duty"))
+        assert ticker.add(reading(n)).flags == Flag.NONE
+        ticker.close()
+    assert ticker.late == 0
+
+
+def test_when_most_sensors_fall_silent_the_clock_takes_over() -> None:
+    """Five of nine lost with their gateway: the other four are used as they come."""
+    ticker = Ticker(TICK, LATE)
+    used = 0
+    for n in range(40):
+        for k in range(9 if n < 10 else 4):
+            ticker.add(seen(n, f"T{k}"))
+        used += sum(len(t.readings) for t in ticker.close(now_us=START + n * S))
+    assert ticker.late == 0
+    assert used >= 9 * 10 + 4 * 24
+
+
+def test_an_orderly_stop_leaves_what_is_stamped_ahead_to_the_next_run() -> None:
+    """Else every other thermocouple would be late for the first minutes of the next run."""
+    ticker = running(0)
+    for n in range(1, 10):
+        for name in ("T1", "T2"):
+            ticker.add(seen(n, name))
+        ticker.add(seen(n, "T9", ahead_s=90))
+    assert stands(ticker.finish_live())[-1] == 10
+    assert ticker.closed_us == START + 10 * S
