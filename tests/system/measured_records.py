@@ -7,8 +7,8 @@ them; tests that need one are skipped without it.
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -16,6 +16,7 @@ import pytest
 from scipy.optimize import least_squares
 
 from platewatch import compose
+from platewatch.compose_plate import reference_degC
 from platewatch.monitor.estimator import Quiet, forecast_step
 from platewatch.monitor.loops import delivered_share
 from platewatch.monitor.pipeline import State, first, step
@@ -24,7 +25,7 @@ from platewatch.thermal.conduction import build_model
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.plate import Zone
 from platewatch.thermal.reduction import point_rows, project, reduce, remainder
-from platewatch.types import Array
+from platewatch.types import Array, Tick
 
 AHEAD_S = 60.0
 
@@ -51,10 +52,10 @@ def states_of(monitor: compose.Monitor, reader: compose.LogReader) -> list[State
     options = monitor.estimator
     ticker, state, states = Ticker(options.tick_us, options.late_us), first(monitor), []
 
-    def run(ticks: Sequence[object]) -> None:
+    def run(ticks: Iterable[Tick]) -> None:
         nonlocal state
         for tick in ticks:
-            state, _ = step(monitor, state, tick)  # type: ignore[arg-type]
+            state, _ = step(monitor, state, tick)
             states.append(state)
 
     for row in reader:
@@ -78,8 +79,12 @@ def carried(quiet: Quiet, state: State, tick_s: float, called_W: Array) -> Array
     dt_us = round(tick_s * 1e6)
     for called in called_W:
         belief, heater_W = forecast_step(quiet, picture, dt_us, called, picture.around)
-        picture = type(picture)(
-            picture.at_us + dt_us, belief, heater_W, called, picture.around, picture.misfit
+        picture = replace(
+            picture,
+            at_us=picture.at_us + dt_us,
+            belief=belief,
+            heater_W=heater_W,
+            called_W=called,
         )
     return np.asarray(quiet.H @ picture.belief.mean)
 
@@ -130,17 +135,20 @@ def _rms(errors: Sequence[Array]) -> float:
 
 
 def simulated(
-    plate: compose.Description, times_s: Array, duty: Array, start_degC: float, steady: bool
+    description: compose.Description,
+    times_s: Array,
+    duty: Array,
+    start_degC: float,
+    steady: bool = False,
 ) -> Array:
     """Readings (t, ns) that the reduced model gives for duties (t, nz), without any filter.
 
     It starts evenly warm at start_degC or, if `steady`, settled at the first duty.
     """
-    described_plate = plate.plate
-    reference = compose_reference(plate)
-    grid = build_grid(described_plate)
-    reduced = reduce(build_model(described_plate, grid, reference))
-    zones, sensors = described_plate.zones, described_plate.sensors
+    plate = description.plate
+    grid = build_grid(plate)
+    reduced = reduce(build_model(plate, grid, reference_degC(description)))
+    zones, sensors = plate.zones, plate.sensors
     rows = point_rows(reduced, np.array([(s.x_m, s.y_m) for s in sensors]))
     heater_lag = np.array([max(z.lag_s, 0.5) for z in zones])
     sensor_lag = np.array([max(s.lag_s, 0.5) for s in sensors])
@@ -169,12 +177,6 @@ def simulated(
         a = after
         readings.append(junction)
     return np.array(readings)
-
-
-def compose_reference(plate: compose.Description) -> float:
-    from platewatch.compose_plate import reference_degC
-
-    return reference_degC(plate)
 
 
 def fitted(
