@@ -58,7 +58,7 @@ class FullOrder:
         rise = (plate.reference_degC or 100.0) - 22.0
         watts = UNKNOWN_SHARE * TYPICAL_W_M2K * rise * area
         q = (watts / op.capacity) ** 2 * UNKNOWN_S * SLOW_S
-        return F, np.diag(q)
+        return np.asarray(F, dtype=np.float64), np.diag(q)
 
     def step(self, degC: Array, watts: Array) -> None:
         """One sample: mean watts (nz,) delivered during it, readings (ns,) at its end."""

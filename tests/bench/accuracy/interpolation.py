@@ -40,7 +40,7 @@ def _linear(weights: Array) -> Interpolator:
 
 
 def _nearest(sensors: Array, places: Array) -> Array:
-    return np.eye(len(sensors))[cdist(places, sensors).argmin(axis=1)]
+    return np.asarray(np.eye(len(sensors))[cdist(places, sensors).argmin(axis=1)])
 
 
 def _inverse_distance(sensors: Array, places: Array) -> Array:

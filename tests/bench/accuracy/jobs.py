@@ -13,7 +13,8 @@ from tests.bench.accuracy.plants import Case, drawn_case, field_case
 from tests.bench.accuracy.watching import Trace, Watch
 
 PEAK_LIMIT_DEGC = 135.0  # alarm limit of the steel table
-HOT_START_S = 5380.0
+HOT_START_S = 5400.0
+AWAKE_S = 300.0  # causes and forecast run so long before an incident
 INCIDENTS = {  # seconds after the incident until a batch has told all
     "cold-load": 1500.0,
     "zone-stays-on": 900.0,
@@ -49,7 +50,7 @@ def field_run(job: FieldJob) -> Run:
     """A clean batch beside interpolation and the full-order filter; no forecast."""
     case = field_case(job.plate)
     watch = Watch.begin(case.monitor, case.simulation(job.seed), compared=True)
-    watch.until(job.end_s or case.until_s, forecast=False)
+    watch.follow(job.end_s or case.until_s)
     return Run(case.name, "clean", job.seed, watch.trace)
 
 
@@ -57,15 +58,16 @@ def field_run(job: FieldJob) -> Run:
 class DrawnJob:
     plate: str
     seed: int
-    forecast: bool
+    alarms: bool
     end_s: float | None = None
 
 
 def drawn_run(job: DrawnJob) -> Run:
-    """A clean batch on a drawn plant; with the forecast also its alarms count."""
+    """A clean batch on a drawn plant; through the whole pipeline its alarms count."""
     case = drawn_case(job.plate)
     watch = Watch.begin(case.monitor, case.simulation(job.seed))
-    watch.until(job.end_s or case.until_s, forecast=job.forecast)
+    run = watch.until if job.alarms else watch.follow
+    run(job.end_s or case.until_s)
     return Run(case.name, "clean", job.seed, watch.trace)
 
 
@@ -89,8 +91,9 @@ def incident_runs(job: IncidentJob) -> list[Run]:
 
 
 def hot_start(case: Case, seed: int, at_s: float) -> Watch:
-    """A clean batch up to a moment; only the field is followed until then."""
-    return Watch.begin(case.monitor, case.simulation(seed)).until(at_s, forecast=False)
+    """A clean batch up to a moment: the quiet filter alone, then the pipeline for a while."""
+    watch = Watch.begin(case.monitor, case.simulation(seed)).follow(at_s - AWAKE_S)
+    return watch.until(at_s)
 
 
 def _incident(job: IncidentJob, start: Watch, name: str) -> Run:

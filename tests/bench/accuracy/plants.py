@@ -25,7 +25,7 @@ FILES = {
     "aluminium": "aluminium-plate.toml",
     "round": "round-bake-plate.toml",
 }
-HOLD_S = {"steel": 5400.0, "aluminium": 5400.0, "round": 4200.0}
+HOLD_S = {"steel": 4200.0, "aluminium": 3600.0, "round": 3000.0}
 WRONG = Uncertain(k=0.05, losses=0.15, power=0.15, emissivity=0.30)
 LEAST_FACTOR = 0.3  # a drawn factor is never below this
 

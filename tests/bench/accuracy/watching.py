@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from platewatch.monitor import pipeline
+from platewatch.monitor.estimator import advance, first_state
+from platewatch.monitor.inputs import take_in
 from platewatch.monitor.peak import WHOLE_PLATE, hottest_now
 from platewatch.monitor.pipeline import Monitor, State
 from platewatch.types import AlarmState, Array, Reading, Tick
@@ -17,6 +18,8 @@ from tests.bench.accuracy.interpolation import Interpolator, interpolators
 from tests.bench.accuracy.plants import extent_m
 
 START_US = 1_800_000_000_000_000
+SAMPLE_US = 2_000_000  # the simulation's own sample time
+ANNUNCIATED = (AlarmState.UNACKNOWLEDGED, AlarmState.LATCHED_UNACKNOWLEDGED)
 LOOK_EVERY_S = 60.0
 FIRST_LOOK_S = 300.0  # the filter has then been running for five minutes
 SETTLING_S = 900.0  # hold counts from so long after the soak began
@@ -121,37 +124,45 @@ class Watch:
         twin.looks, twin.raised, twin.peaks, twin.sensors = [], [], [], []
         return twin
 
-    def until(
-        self, end_s: float, *, forecast: bool = True, stop: Callable[[Sample], bool] | None = None
-    ) -> Watch:
-        """Run on.  Without forecast only the field is followed, at a fraction of the cost."""
-        monitor = self.monitor
-        if not forecast:
-            rare = replace(monitor.forecast, every_s=1e9)
-            monitor = replace(monitor, forecast=rare)
+    def until(self, end_s: float) -> Watch:
+        """Run on through the whole pipeline."""
         while self.run.at_s < end_s - 1e-9:
             sample = self.run.step()
-            self._tick(monitor, sample)
-            if stop is not None and stop(sample):
-                break
+            self.state, outcome = pipeline.step(self.monitor, self.state, _tick_of(sample))
+            self.raised += [
+                Raised(sample.at_s, event.alarm, event.subject)
+                for event in outcome.alarm_events
+                if event.to_state in ANNUNCIATED
+            ]
+            self._note(sample)
         return self
 
-    def _tick(self, monitor: Monitor, sample: Sample) -> None:
-        at_us = START_US + round(sample.at_s * 1e6)
-        readings = tuple(
-            Reading(at_us, channel, value, at_us)
-            for channel, value in sorted(sample.readings.items())
-            if not np.isnan(value)
-        )
-        tick = Tick(at_us, round(self.run.sample_s * 1e6), readings)
-        self.state, outcome = pipeline.step(monitor, self.state, tick)
+    def follow(self, end_s: float) -> Watch:
+        """Run on with the quiet filter alone: the field without forecast and alarms."""
+        quiet = self.monitor.quiet
+        while self.run.at_s < end_s - 1e-9:
+            sample = self.run.step()
+            tick = _tick_of(sample)
+            heard, seen = take_in(quiet, self.state.heard, tick, self.monitor.unit)
+            picture = self.state.picture
+            if picture is None:
+                picture = first_state(quiet, tick.at_us, seen)
+            else:
+                picture, _ = advance(quiet, picture, tick.dt_us, seen)
+            began = self.state.started_us or tick.at_us
+            self.state = replace(
+                self.state,
+                heard=heard,
+                picture=picture,
+                started_us=began,
+                silent_since_us=tick.at_us,
+            )
+            self._note(sample)
+        return self
+
+    def _note(self, sample: Sample) -> None:
         if any(event.get("step") == "soak" for event in sample.events):
             self.soak_s = min(self.soak_s, sample.at_s)
-        self.raised += [
-            Raised(sample.at_s, event.alarm, event.subject)
-            for event in outcome.alarm_events
-            if event.to_state is AlarmState.UNACKNOWLEDGED
-        ]
         self.peaks.append((sample.at_s, sample.truth.peak_degC))
         self.sensors.append((sample.at_s, sample.truth.hottest_degC))
         if self.full is not None:
@@ -205,6 +216,16 @@ class Watch:
         return Trace(
             tuple(self.looks), tuple(self.raised), np.array(self.peaks), np.array(self.sensors)
         )
+
+
+def _tick_of(sample: Sample) -> Tick:
+    at_us = START_US + round(sample.at_s * 1e6)
+    readings = tuple(
+        Reading(at_us, channel, value, at_us)
+        for channel, value in sorted(sample.readings.items())
+        if not np.isnan(value)
+    )
+    return Tick(at_us, SAMPLE_US, readings)
 
 
 def places(monitor: Monitor) -> Array:
