@@ -14,11 +14,11 @@ import shapely
 from numpy.typing import NDArray
 
 from platewatch.monitor.kalman import Coupling, Innovation, predict_coupled, update
-from platewatch.monitor.tolerance import tolerance_K
+from platewatch.monitor.tolerance import bias_sd_K
 from platewatch.monitor.transition import Blocks, Continuous, Noise, Steps
 from platewatch.thermal.conduction import InputKind, conduction_matrix
 from platewatch.thermal.grid import Grid, hats
-from platewatch.thermal.plate import Plate, Sensor, geometry
+from platewatch.thermal.plate import Plate, geometry
 from platewatch.thermal.reduction import (
     ReducedModel,
     flux_modes,
@@ -31,7 +31,6 @@ from platewatch.types import Array, Gaussian
 
 BUMPS = 24  # nodes of the coarse mesh that carries the smooth unknown heat
 LEAST_LAG_S = 0.5  # a thermocouple without lag would only stiffen the arithmetic
-BIAS_WITHOUT_CLASS_K = 0.2
 POWER_MEMORY_S = 240.0
 BUMP_MEMORY_S = 3600.0
 BIAS_MEMORY_S = 30 * 86400.0
@@ -52,6 +51,7 @@ FORGET_NIS = 16.0
 LOCAL_SHARE = 0.2
 ZONE_SHARE = 0.5
 PARAMETERS = 5  # conductivity, losses, heat capacity, power, emissivity
+POWER = 3  # which of them is the error of all heater power
 
 
 @dataclass(frozen=True)
@@ -95,8 +95,7 @@ class Quiet:
 
     @cached_property
     def _places_of_inputs(self) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        powers, temperatures = self.zone_u, self.around_u
-        return np.array(powers, dtype=np.int64), np.array(temperatures, dtype=np.int64)
+        return np.array(self.zone_u, dtype=np.int64), np.array(self.around_u, dtype=np.int64)
 
     def steps_for(self, heard: bool) -> Steps:
         """Exact steps; where duty is not on the bus, heater power is far less certain."""
@@ -110,6 +109,7 @@ class FieldState:
     heater_W (nz,): output of the heaters as called for, after their lag
     called_W (nz,): last called watts;  around (nu,): last known temperatures
     misfit: running mean of NIS per reading, 1 where the model fits
+    extra (r,): modal watts of heat that is known to go on, None where there is none
     """
 
     at_us: int
@@ -118,6 +118,7 @@ class FieldState:
     called_W: Array
     around: Array
     misfit: float = 1.0
+    extra: Array | None = None
 
 
 @dataclass(frozen=True)
@@ -143,15 +144,6 @@ def bump_fluxes(grid: Grid, nodes: int = BUMPS) -> Array:
     """The coarse mesh as heat: (n_cells, nb) in m2; equal values are one uniform flux."""
     q = hats(grid, nodes) * grid.area[:, None]
     return np.asarray(q[:, q.sum(0) > 1e-3 * grid.area.sum() / nodes])
-
-
-def bias_sd_K(sensor: Sensor, reference_degC: float) -> float:
-    """Anywhere within the limit of the class (IEC 60584-1, IEC 60751) with equal probability:
-    the limit over the root of three (JCGM 100:2008, 4.3.7)."""
-    if sensor.tolerance_class is None:
-        return BIAS_WITHOUT_CLASS_K
-    limit = tolerance_K(sensor.element, sensor.tolerance_class, reference_degC)
-    return BIAS_WITHOUT_CLASS_K if limit is None else limit / 3**0.5
 
 
 def nearest_zone(plate: Plate, grid: Grid) -> tuple[str, ...]:
@@ -324,6 +316,7 @@ def advance(
         seen.called_end_W,
         seen.around,
         _misfit(state.misfit, innovation, dt_us),
+        state.extra,
     )
     return moved, innovation
 
@@ -358,6 +351,8 @@ def forecast_step(
         + step.constant
         + by_theta[:, -1]
     )
+    if state.extra is not None:
+        push = push + step.modal @ state.extra
     couplings = (
         *step.couplings,
         Coupling(k.a, k.theta, by_theta[k.a, :-1]),

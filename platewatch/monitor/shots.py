@@ -1,11 +1,11 @@
-"""The estimator's state as one stored value, and back."""
+"""The estimator's state as one stored value and back, and the watts it tells of."""
 
 from __future__ import annotations
 
 import numpy as np
 
-from platewatch.monitor.estimator import FieldState, Quiet
-from platewatch.types import Array, FieldShot, Gaussian
+from platewatch.monitor.estimator import POWER, FieldState, Quiet
+from platewatch.types import Array, FieldShot, Gaussian, ZonePowerRow
 
 
 def shot_of(quiet: Quiet, field: FieldState, duty: Array) -> FieldShot:
@@ -25,3 +25,23 @@ def field_of(quiet: Quiet, shot: FieldShot | None) -> tuple[FieldState, Array] |
     heater, called, duty, around, rest = np.split(shot.drive, [nz, 2 * nz, 3 * nz, 3 * nz + nu])
     belief = Gaussian(shot.mean, shot.cov)
     return FieldState(shot.at_us, belief, heater, called, around, float(rest[0])), duty
+
+
+def power_rows(quiet: Quiet, field: FieldState) -> tuple[ZonePowerRow, ...]:
+    """Watts called for and delivered, by zone, at the heaters' output.
+
+    Delivered is (called + d)(1 + theta), d the zone's own excess and theta the relative
+    error of all heater power; its variance is linearised there.
+    """
+    k, mean, cov = quiet.blocks, field.belief.mean, field.belief.cov
+    common = k.theta.start + POWER
+    share = 1 + mean[common]
+    plain = field.heater_W + mean[k.d]
+    variance = share**2 * np.diag(cov)[k.d] + plain**2 * cov[common, common]
+    variance += 2 * share * plain * cov[k.d, common]
+    return tuple(
+        ZonePowerRow(field.at_us, zone.name, float(called), float(watts), float(sd))
+        for zone, called, watts, sd in zip(
+            quiet.plate.zones, field.heater_W, share * plain, np.sqrt(variance), strict=True
+        )
+    )

@@ -9,6 +9,9 @@ from __future__ import annotations
 from typing import NamedTuple
 
 from platewatch.errors import SettingsError
+from platewatch.thermal.plate import Sensor
+
+BIAS_WITHOUT_CLASS_K = 0.2
 
 
 class Rule(NamedTuple):
@@ -73,3 +76,12 @@ def tolerance_K(element: str, tolerance_class: str, degC: float) -> float | None
             f"it has {', '.join(CLASSES[element])}"
         )
     return next((limit for rule in rules if (limit := rule.at(degC)) is not None), None)
+
+
+def bias_sd_K(sensor: Sensor, reference_degC: float) -> float:
+    """Anywhere within the limit of the class (IEC 60584-1, IEC 60751) with equal probability:
+    the limit over the root of three (JCGM 100:2008, 4.3.7)."""
+    if sensor.tolerance_class is None:
+        return BIAS_WITHOUT_CLASS_K
+    limit = tolerance_K(sensor.element, sensor.tolerance_class, reference_degC)
+    return BIAS_WITHOUT_CLASS_K if limit is None else limit / 3**0.5

@@ -21,6 +21,7 @@ from statsmodels.tsa.statespace.mlemodel import MLEModel
 
 from platewatch.compose import build_monitor, describe
 from platewatch.monitor import forecast, inputs, peak, pipeline
+from platewatch.monitor.control import loop_start
 from platewatch.monitor.estimator import advance, forecast_step
 from platewatch.monitor.kalman import Coupling, predict, predict_coupled, update
 from platewatch.monitor.peak import WHOLE_PLATE
@@ -126,14 +127,19 @@ def parts(monitor, state, tick) -> dict[str, float]:
     belief = state.picture.belief
     _, seen = inputs.take_in(q, state.heard, tick, monitor.unit)
     around = seen.around
-    options, start = monitor.forecast, pipeline.loop_start(monitor, state)
+    options = monitor.forecast
+
+    def begin():
+        times = forecast.horizon_times(options)
+        return loop_start(monitor.loops, monitor.recipes, times, state.heard, state.integral)
+
+    start = begin()
     X = forecast.state_draws(state.picture, Z)
     path = forecast.carry(q, state.picture, monitor.loops, start, X, options)
 
     def ahead():
         drawn = forecast.state_draws(state.picture, Z)
-        begun = pipeline.loop_start(monitor, state)
-        carried = forecast.carry(q, state.picture, monitor.loops, begun, drawn, options)
+        carried = forecast.carry(q, state.picture, monitor.loops, begin(), drawn, options)
         forecast.hottest_ahead(q, where, carried, WHOLE_PLATE)
 
     return {

@@ -7,13 +7,15 @@ import pytest
 from watched_plate import TICK_US, observed, plate, quiet
 
 from platewatch.monitor.estimator import (
+    POWER,
     advance,
-    bias_sd_K,
     first_state,
     forecast_step,
     nearest_zone,
     restarted,
 )
+from platewatch.monitor.shots import power_rows
+from platewatch.monitor.tolerance import bias_sd_K
 from platewatch.thermal.conduction import conduction_matrix, loss_watts
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import project
@@ -219,3 +221,23 @@ def test_a_plate_whose_duty_is_unknown_is_far_less_certain_of_its_heat():
     deaf, _ = advance(q, state, TICK_US, replace(observed(q, [100.0] * 3), duty_heard=False))
     d = q.blocks.d
     assert (np.diag(deaf.belief.cov)[d] > np.diag(heard.belief.cov)[d]).all()
+
+
+def test_delivered_watts_carry_the_doubt_about_all_heaters():
+    """(called + d)(1 + theta): mean and standard deviation against 200,000 draws (1 %)."""
+    q = quiet()
+    k = q.blocks
+    start = first_state(q, 0, observed(q, [100.0] * 3))
+    mean, cov = start.belief.mean.copy(), start.belief.cov.copy()
+    mean[k.d], mean[k.theta.start + POWER] = [10.0, -5.0], 0.03
+    state = replace(start, belief=Gaussian(mean, cov), heater_W=np.array([200.0, 300.0]))
+    both = [*range(k.d.start, k.d.stop), k.theta.start + POWER]
+    drawn = np.random.default_rng(0).multivariate_normal(
+        mean[both], cov[np.ix_(both, both)], 200_000
+    )
+    watts = (state.heater_W + drawn[:, :2]) * (1 + drawn[:, 2:])
+    rows = power_rows(q, state)
+    assert [r.zone for r in rows] == ["L", "R"]
+    assert [r.called_W for r in rows] == [200.0, 300.0]
+    assert [r.inferred_W for r in rows] == pytest.approx(watts.mean(axis=0), rel=0.01)
+    assert [r.sd_W for r in rows] == pytest.approx(watts.std(axis=0), rel=0.01)

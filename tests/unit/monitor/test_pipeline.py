@@ -102,18 +102,19 @@ def near(m, state, x, y):
 
 
 def test_a_silent_thermocouple_widens_the_band_near_itself():
-    """A silent for three minutes: wider at A, less so at B; with A back, as before."""
-    m, ticks = monitor(), heat_up()
-    full, _ = run(ticks[:290])
+    """A silent for thirteen minutes: at A wider by more than the tolerance class leaves of a
+    doubt, at B as good as unchanged; with A back, as before to one in a hundred."""
+    m, ticks = monitor(), heat_up(1200)
+    full, _ = run(ticks[:590])
     state, _ = run(ticks[:200])
-    state, outcomes = run([without(t, "sensor/A") for t in ticks[200:290]], state)
-    wider_A = near(m, state, 0.1, 0.1) / near(m, full, 0.1, 0.1)
-    wider_B = near(m, state, 0.3, 0.1) / near(m, full, 0.3, 0.1)
-    assert wider_A > 1.05
-    assert wider_A > wider_B
+    state, outcomes = run([without(t, "sensor/A") for t in ticks[200:590]], state)
+    gained_A = near(m, state, 0.1, 0.1) ** 2 - near(m, full, 0.1, 0.1) ** 2
+    gained_B = near(m, state, 0.3, 0.1) ** 2 - near(m, full, 0.3, 0.1) ** 2
+    assert gained_A > 5 * m.quiet.noise_var[0]
+    assert gained_A > 10 * gained_B
     assert events(outcomes, "picture-blind") == []
-    back, _ = run(ticks[290:], state)
-    assert near(m, back, 0.1, 0.1) < near(m, state, 0.1, 0.1)
+    back, _ = run(ticks[590:], state)
+    assert near(m, back, 0.1, 0.1) == pytest.approx(near(m, full, 0.1, 0.1), rel=0.01)
 
 
 def test_without_any_thermocouple_the_picture_is_blind_once_and_within_ten_seconds():
