@@ -42,6 +42,7 @@ MISFIT_MOST = 2.0
 MISFIT_AT_ONCE = 4.0
 # Over a time without ticks the losses are linearised anew this often.
 LONGEST_STEP_US = 120_000_000
+USUAL_TICK_S = 2.0
 # Readings that come back after this long, and miss what is expected of them by about four
 # standard deviations each, tell that the plate was not left alone: start from them.
 FORGET_AFTER_US = 300_000_000
@@ -282,10 +283,12 @@ def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
     return FieldState(at_us, posterior, seen.called_end_W, seen.called_end_W, seen.around)
 
 
-def sensitivities(quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array) -> Array:
+def sensitivities(
+    quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array, held_s: float = USUAL_TICK_S
+) -> Array:
     """Modal heat (r, PARAMETERS + 1) per unit relative error of conductivity, of losses but
     for radiation, of heat capacity, heater power and emissivity; in the last column the
-    remainder: bent losses, k(T) and cp(T)."""
+    remainder: bent losses, k(T) and cp(T).  It will be held for held_s."""
     system, properties = quiet.steps.system, quiet.reduced.properties
     u = quiet.inputs(zone_W, around)
     rest = remainder(quiet.reduced, a, u)
@@ -299,7 +302,7 @@ def sensitivities(quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Ar
     linear = warming - rest
     more = properties.conducted(a, u)
     heat = np.array((-spread - more, rays - lost, zone_heat, -rays, warming - more)).T
-    by_k, by_losses, by_power, by_rays, warming = properties.warming(a, heat).T
+    by_k, by_losses, by_power, by_rays, warming = properties.warming(a, heat, held_s).T
     return np.array((by_k, by_losses, -warming, by_power, by_rays, warming - linear)).T
 
 
@@ -342,7 +345,7 @@ def forecast_step(
     step = quiet.steps_for(seen.duty_heard if seen else True).of(dt_us)
     mean = state.belief.mean
     delivered = state.heater_W + mean[k.d]
-    S = sensitivities(quiet, mean[k.a], delivered, mean[k.b], around)
+    S = sensitivities(quiet, mean[k.a], delivered, mean[k.b], around, dt_us / 1e6)
     by_theta = step.modal @ S
     push = (
         step.heater @ state.heater_W

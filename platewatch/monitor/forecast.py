@@ -160,6 +160,8 @@ def _held_push(quiet: Quiet, state: FieldState, step: Step, stack: _Stack, X: Ar
     disturbed = slice(quiet.blocks.d.start, quiet.blocks.b.stop)
     held = step.F[stack.rest_of, disturbed] @ X[disturbed]
     held += (step.around @ state.around + step.constant)[stack.rest_of][:, None]
+    if state.extra is not None:
+        held += (stack.modal @ state.extra)[:, None]
     return held
 
 
@@ -170,7 +172,8 @@ def _modal_heat(
     k = quiet.blocks
     even = np.full(X.shape[1], 1 / X.shape[1])
     delivered = p @ even + state.belief.mean[k.d]
-    S = sensitivities(quiet, a @ even, delivered, state.belief.mean[k.b], state.around)
+    bump, held_s = state.belief.mean[k.b], REFRESH_TABLES_S
+    S = sensitivities(quiet, a @ even, delivered, bump, state.around, held_s)
     push = stack.modal @ S
     return np.asarray(push[:, :-1] @ X[k.theta] + push[:, -1][:, None])
 

@@ -8,15 +8,15 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 
-import numpy as np
-
 from platewatch.monitor import conditions as ask
 from platewatch.monitor import verdicts
 from platewatch.monitor.alarms import Alarm, Condition
 from platewatch.monitor.annunciate import apply_actions, apply_conditions
 from platewatch.monitor.causes import layer
+from platewatch.monitor.causes.settled import left_out, without
 from platewatch.monitor.causes.views import View
 from platewatch.monitor.conditions import Estimate, Words
+from platewatch.monitor.control import integrals, loop_start
 from platewatch.monitor.estimator import (
     FORGET_AFTER_US,
     LONGEST_STEP_US,
@@ -31,12 +31,12 @@ from platewatch.monitor.estimator import (
 from platewatch.monitor.forecast import horizon_times
 from platewatch.monitor.inputs import Heard, nothing_heard, take_in
 from platewatch.monitor.limits import AlarmLimit, LimitKind
-from platewatch.monitor.loops import Loops, LoopStart, set_points_ahead
+from platewatch.monitor.loops import Loops
 from platewatch.monitor.options import EstimatorOptions, ForecastOptions
 from platewatch.monitor.outlook import Ahead, Means, Prospect, look_ahead, now_of, present, worst_of
 from platewatch.monitor.peak import WHOLE_PLATE, Hottest, Places
 from platewatch.monitor.recipe import Recipe
-from platewatch.monitor.shots import field_of, shot_of
+from platewatch.monitor.shots import field_of, power_rows, shot_of
 from platewatch.types import (
     AlarmState,
     Array,
@@ -143,13 +143,22 @@ def resume(
 def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
     """One tick of one plate."""
     heard, seen = take_in(monitor.quiet, state.heard, tick, monitor.unit)
-    state = replace(state, heard=heard, integral=_controllers(monitor, state, heard, tick))
+    state = replace(
+        state, heard=heard, integral=integrals(monitor.loops, state.integral, heard, tick.dt_us)
+    )
     if state.picture is None and not seen.sensors:
         alarms, events = apply_actions(state.alarms, tick)
         return replace(state, alarms=alarms), Outcome(
             tick.at_us, alarm_events=events, applied=tuple(a.seq for a in tick.actions)
         )
     before = state.picture
+    if state.causes is not None:
+        assert monitor.causes is not None
+        everyone = seen
+        seen = without(seen, left_out(state.causes.settled, monitor.quiet))
+        if before is not None:
+            causes = layer.review_settled(monitor.causes, state.causes, before, everyone)
+            state = replace(state, causes=causes)
     state, gaps = _see(monitor, state, tick, seen)
     state = _attend(monitor, state, before, tick, seen)
     assert state.picture is not None
@@ -166,13 +175,13 @@ def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
     events = acknowledged + raised
     state, shot = _shot(monitor, state, tick, bool(events))
     state, powers = _powers(monitor, state, tick)
-    state, causes = _causes(monitor, state, tick)
+    state, cause_rows = _causes(monitor, state, tick)
     return state, Outcome(
         at_us=tick.at_us,
         peak=_peak_row(monitor, state, tick, now[WHOLE_PLATE]),
         zone_powers=powers,
         limits=_limit_rows(monitor, state, tick),
-        causes=causes,
+        causes=cause_rows,
         alarm_events=events,
         shot=shot,
         gaps=gaps,
@@ -209,11 +218,10 @@ def _see(
 
 def _begun(monitor: Monitor, state: State, tick: Tick, seen: Observed) -> State:
     """The picture made from this tick's readings alone."""
-    picture = first_state(monitor.quiet, tick.at_us, seen)
     at_us = tick.at_us
-    return replace(
-        state, picture=picture, started_us=at_us, silent_since_us=at_us, settled=False, ahead=None
-    )
+    picture = first_state(monitor.quiet, at_us, seen)
+    anew = replace(state, picture=picture, settled=False, ahead=None)
+    return replace(anew, started_us=at_us, silent_since_us=at_us)
 
 
 def _blind_after_us(state: State) -> int:
@@ -234,40 +242,6 @@ def _forecast_due(monitor: Monitor, state: State, tick: Tick) -> bool:
     return tick.at_us - state.ahead.at_us >= round(monitor.forecast.every_s * 1e6)
 
 
-def _errors_K(monitor: Monitor, heard: Heard) -> Array:
-    """(nz,) set-point minus reading of each loop; nan where loop, reading or duty is not known."""
-    error = heard.set_point - heard.degC[monitor.loops.sensor]
-    return np.where(np.isfinite(heard.duty) & (monitor.loops.closed > 0), error, np.nan)
-
-
-def _controllers(monitor: Monitor, state: State, heard: Heard, tick: Tick) -> Array:
-    """What the controllers' integrals have come to, as far as can be told from outside."""
-    before = state.integral
-    if before is None:
-        before = np.full(heard.duty.size, np.nan)
-    error = _errors_K(monitor, heard)
-    live = np.isfinite(error)
-    duty, error = np.where(live, heard.duty, 0.0), np.where(live, error, 0.0)
-    after = monitor.loops.follow(before, duty, error, tick.dt_us / 1e6)
-    return np.where(live, after, np.nan)
-
-
-def loop_start(monitor: Monitor, state: State) -> LoopStart:
-    """What the controllers are doing, from what was last heard of them."""
-    heard = state.heard
-    ahead = set_points_ahead(
-        heard.set_point, heard.set_point_slope, monitor.recipes, horizon_times(monitor.forecast)
-    )
-    live = np.isfinite(_errors_K(monitor, heard))
-    integral = np.zeros(live.size) if state.integral is None else state.integral
-    return LoopStart(
-        duty=np.nan_to_num(heard.duty),
-        integral=np.nan_to_num(integral),
-        set_points=np.where(live[:, None], ahead, 0.0),
-        live=live,
-    )
-
-
 def _attend(
     monitor: Monitor, state: State, before: FieldState | None, tick: Tick, seen: Observed
 ) -> State:
@@ -280,7 +254,8 @@ def _attend(
     causes = state.causes or layer.State(tuple(range(len(monitor.quiet.plate.sensors))))
     causes = layer.take_evidence(model, causes, tick)
     if not seen.sensors:
-        return replace(state, causes=layer.State(causes.sensors, answer=causes.answer))
+        idle = layer.State(causes.sensors, answer=causes.answer, settled=causes.settled)
+        return replace(state, causes=idle)
     dt_us = tick.at_us - before.at_us
     return replace(state, causes=layer.attend(model, causes, before, dt_us, seen))
 
@@ -288,15 +263,21 @@ def _attend(
 def _look(monitor: Monitor, state: State) -> State:
     """Explain what does not fit, and carry every credible explanation over the horizon."""
     assert state.picture is not None
-    causes, p_none = state.causes, 1.0
+    causes, p_none, times = state.causes, 1.0, horizon_times(monitor.forecast)
     views: tuple[View, ...] = ()
     if monitor.causes is not None and causes is not None:
-        times = horizon_times(monitor.forecast)
         causes = layer.explain(monitor.causes, causes, state.picture, times)
         views, p_none = causes.views, causes.p_none
-    ahead = look_ahead(monitor.means, state.picture, loop_start(monitor, state), views, p_none)
+    start = loop_start(monitor.loops, monitor.recipes, times, state.heard, state.integral)
+    ahead = look_ahead(monitor.means, state.picture, start, views, p_none)
     question = verdicts.question(monitor.words, ahead.prospects)
     return replace(state, causes=causes, ahead=ahead, question=question)
+
+
+def _settled(state: State) -> tuple[Prospect, ...]:
+    """Causes that are part of the picture by now: they still hold."""
+    settled = () if state.causes is None else state.causes.settled
+    return tuple(Prospect(each.view, 1.0, {}, {}, {}) for each in settled)
 
 
 def _causes(monitor: Monitor, state: State, tick: Tick) -> tuple[State, tuple[CauseRow, ...]]:
@@ -306,7 +287,8 @@ def _causes(monitor: Monitor, state: State, tick: Tick) -> tuple[State, tuple[Ca
     if tick.at_us - state.causes_us < CAUSES_EVERY_US:
         return state, ()
     rows = tuple(
-        CauseRow(tick.at_us, p.name, p.subjects, p.probability) for p in state.ahead.prospects
+        CauseRow(tick.at_us, p.name, p.subjects, p.probability)
+        for p in (*state.ahead.prospects, *_settled(state))
     )
     return replace(state, causes_us=tick.at_us), rows
 
@@ -336,8 +318,9 @@ def _conditions(
             estimate = _estimate(monitor, state, limit, now[limit.zone])
             found += [ask.peak_coming(words, estimate), ask.peak_now(words, estimate)]
     standing = frozenset(state.alarms)
-    found += verdicts.zone_alarms(words, state.ahead.prospects, standing)
-    found += verdicts.sensor_alarms(words, state.ahead.prospects, standing)
+    said = (*state.ahead.prospects, *_settled(state))
+    found += verdicts.zone_alarms(words, said, standing)
+    found += verdicts.sensor_alarms(words, said, standing)
     for limit in ask.sensor_limits(monitor.limits):
         for i, sensor in enumerate(monitor.quiet.plate.sensors):
             fresh = tick.at_us - state.heard.sensor_us[i] <= after_us
@@ -402,14 +385,7 @@ def _powers(monitor: Monitor, state: State, tick: Tick) -> tuple[State, tuple[Zo
     if tick.at_us - state.power_us < ZONE_POWER_EVERY_US:
         return state, ()
     assert state.picture is not None
-    f, d = state.picture, monitor.quiet.blocks.d
-    sd = np.sqrt(np.diag(f.belief.cov)[d])
-    rows = tuple(
-        ZonePowerRow(tick.at_us, zone.name, float(called), float(called + more), float(spread))
-        for zone, called, more, spread in zip(
-            monitor.quiet.plate.zones, f.heater_W, f.belief.mean[d], sd, strict=True
-        )
-    )
+    rows = power_rows(monitor.quiet, state.picture)
     return replace(state, power_us=tick.at_us), rows
 
 

@@ -23,6 +23,7 @@ from platewatch.types import Array
 
 SPAWN_S = 10.0  # onsets are tried this far apart
 DAY_S = 86400.0
+PLACED_BY = 40  # hypotheses that a cause's place is averaged over
 
 
 @dataclass(frozen=True)
@@ -120,8 +121,11 @@ def log_evidence(bank: Bank, watch: Watch, tick_s: float) -> tuple[Array, Array,
     return low + np.log(2), high + np.log(2), J
 
 
+Groups = dict[tuple[Cause, str], tuple[Array, Array, float]]
+
+
 def findings(
-    bank: Bank, watch: Watch, options: CauseOptions, tick_s: float, temper: float = 1.0
+    bank: Bank, watch: Watch, groups: Groups, tick_s: float
 ) -> tuple[list[Finding], float]:
     """Every cause with its probability, most probable first, and that of none."""
     if watch.rows == 0:
@@ -129,16 +133,17 @@ def findings(
     low, high, J = log_evidence(bank, watch, tick_s)
     spacing = spacing_ticks(tick_s)
     onset_prior = np.log(spacing * tick_s / DAY_S)
-    groups = _groups(bank, options)
     found: list[tuple[Cause, str, float, list[tuple[float, int, int]]]] = []
     for (cause, subject), (columns, positives, log_prior) in groups.items():
-        evidence = np.where(positives[None, :], high[:, columns], low[:, columns]) / temper
-        weight = evidence + log_prior[None, :] + onset_prior
+        evidence = np.where(positives, high[:, columns], low[:, columns])
+        weight = (evidence + (log_prior + onset_prior)).ravel()
         top = float(weight.max())
         total = top + float(np.log(np.exp(weight - top).sum()))
-        order = np.argsort(weight, axis=None)[::-1][:40]
+        count = min(PLACED_BY, weight.size)
+        order = np.argpartition(-weight, count - 1)[:count]
+        order = order[np.argsort(-weight[order], kind="stable")]
         best = [
-            (float(weight.flat[i]), int(columns[i % len(columns)]), int(i // len(columns)))
+            (float(weight[i]), int(columns[i % columns.size]), int(i // columns.size))
             for i in order
         ]
         found.append((cause, subject, total, best))
@@ -188,10 +193,8 @@ def _finding(
     )
 
 
-def _groups(
-    bank: Bank, options: CauseOptions
-) -> dict[tuple[Cause, str], tuple[Array, Array, Array]]:
-    """Columns, signs and log prior rates of each (cause, subject)."""
+def groups_of(bank: Bank, options: CauseOptions) -> Groups:
+    """Columns, signs and log prior rate of each (cause, subject)."""
     members: dict[tuple[Cause, str], list[tuple[int, bool]]] = {}
     for column, (p, shape) in enumerate(zip(bank.column_pattern, bank.column_shape, strict=True)):
         pattern = bank.patterns[p]
@@ -206,7 +209,7 @@ def _groups(
         key: (
             np.array([c for c, _ in hypotheses]),
             np.array([s for _, s in hypotheses]),
-            np.full(len(hypotheses), np.log(prior_rate(options, key[0]) / totals[key[0]])),
+            float(np.log(prior_rate(options, key[0]) / totals[key[0]])),
         )
         for key, hypotheses in members.items()
     }

@@ -25,6 +25,8 @@ THIN = 4
 MISMATCH = 0.1  # share of a response that a right cause still gets wrong
 FEATURE_TICKS = 15.0
 SMOOTH_TICKS = 7
+SINGLE = 1e-5
+UNKNOWN_HEAT_SHARE = 0.2
 Ints = NDArray[np.int64]
 
 
@@ -204,7 +206,8 @@ def fit(
     """
     bank = seen.bank
     which = bank.column_pattern[columns]
-    sd = np.array([bank.patterns[p].sd[-1] for p in which])
+    cause_of_family = {FAMILY_OF[cause]: cause for cause, _ in parts}
+    sd = np.array([_sd(bank, p, cause_of_family) for p in which])
     weigh, window = seen.weigh(age), seen.window(age)
     G = sd[:, None] * gram(bank, columns, age, weigh) * sd
     b = sd * correlation(bank, columns, age, weigh, window)
@@ -234,6 +237,14 @@ def fit(
         float(share @ x / share.sum()),
         float(share @ y / share.sum()),
     )
+
+
+def _sd(bank: Bank, p: int, cause_of_family: dict[Family, Cause]) -> float:
+    """Prior spread of an amplitude; heat that nobody called for is never as strong as what
+    a cold load takes."""
+    pattern = bank.patterns[p]
+    unknown = cause_of_family[pattern.family] is Cause.UNKNOWN_HEAT
+    return UNKNOWN_HEAT_SHARE * pattern.sd[-1] if unknown else pattern.sd[-1]
 
 
 @dataclass(frozen=True)
@@ -285,7 +296,9 @@ def _places(bank: Bank, which: Ints) -> list[tuple[int, ...]]:
 
 def _posterior(G: Array, b: Array, T: Array, signs: Array) -> _Posterior:
     """Amplitudes of one variant; those with a sign that would come out wrong stay at none."""
-    M, c = np.eye(T.shape[1]) + T.T @ G @ T, T.T @ b
+    M, c = T.T @ G @ T, T.T @ b
+    # Signatures are kept in single precision: their rounding must not show as negative.
+    M[np.diag_indices(c.size)] += 1 + SINGLE * np.diag(M).max(initial=0.0)
     active = _same_sign(M, c, signs) if signs.any() else np.arange(c.size)
     z, root = np.zeros(c.size), np.zeros((c.size, c.size))
     if active.size == 0:

@@ -28,6 +28,7 @@ class View:
     heat_ahead (steps, r): modal watts of the cause along the horizon
     reading_error (ns,): K by which thermocouples will read off
     watts: what it adds or takes at present;  onset_us: since when
+    lasting (r,): modal watts of the part that goes on;  lasting_share: of the present heat
     """
 
     parts: tuple[tuple[Cause, str], ...]
@@ -40,6 +41,8 @@ class View:
     onset_us: int
     x_m: float
     y_m: float
+    lasting: Array
+    lasting_share: float
 
     @property
     def cause(self) -> Cause:
@@ -139,6 +142,8 @@ def build_views(
                 onset_us=field.at_us - round(f.age * bank.push.tick_s * 1e6),
                 x_m=f.x_m,
                 y_m=f.y_m,
+                lasting=_lasting(quiet, bank, f)[0],
+                lasting_share=_lasting(quiet, bank, f)[1],
             )
         )
     return tuple(views)
@@ -191,3 +196,20 @@ def _watts(bank: Bank, f: Fit) -> float:
         if heat is not None:
             total += float(amount * bank.column_shape[c].at(t)[0] * heat.sum())
     return total
+
+
+def _lasting(quiet: Quiet, bank: Bank, f: Fit) -> tuple[Array, float]:
+    """Modal watts (r,) of the heat that does not die away, and its share of the present heat."""
+    t = np.array([f.age * bank.push.tick_s])
+    lasting, going, total = np.zeros(quiet.blocks.modes), 0.0, 0.0
+    for c, amount in zip(f.columns, f.amplitude, strict=True):
+        p, shape = bank.column_pattern[c], bank.column_shape[c]
+        heat = bank.patterns[p].heat
+        if heat is None:
+            continue
+        now = float(amount * shape.at(t)[0])
+        total += abs(now * float(heat.sum()))
+        if shape.kind != "decay":
+            lasting += now * bank.push.modal[:, p]
+            going += abs(now * float(heat.sum()))
+    return lasting, going / total if total > 0 else 0.0
