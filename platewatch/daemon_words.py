@@ -12,7 +12,16 @@ from platewatch.units import iso
 
 REPEAT_AFTER_S = 60.0
 LOUD = frozenset({"refused", "subscription refused", "taken over", "queue full", "callback failed"})
-TROUBLED = frozenset({"no broker", "lost", "session forgotten", "network thread restarted"})
+TROUBLED = frozenset(
+    {
+        "no broker",
+        "lost",
+        "session forgotten",
+        "sessions not kept",
+        "silent",
+        "network thread restarted",
+    }
+)
 
 
 class JsonLines(logging.Formatter):

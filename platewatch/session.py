@@ -5,11 +5,36 @@ The daemon and the replay both drive this; it is owned by one thread.
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Iterable, Mapping
+from dataclasses import replace
 
+from platewatch.monitor.annunciate import apply_conditions
 from platewatch.monitor.pipeline import Monitor, State, first, resume, step
+from platewatch.monitor.record_room import (
+    ALARM,
+    RECORD_EVENT,
+    Keeping,
+    RecordState,
+    record_event,
+    record_state,
+    store_failing,
+)
 from platewatch.monitor.ticks import Ticker
-from platewatch.types import Action, AlarmState, BatchEvent, FieldShot, Outcome, Reading, Tick
+from platewatch.types import (
+    FILLED,
+    Action,
+    AlarmState,
+    BatchEvent,
+    FieldShot,
+    Flag,
+    Gap,
+    Outcome,
+    Reading,
+    Tick,
+)
+
+__all__ = ["Keeping", "RecordState", "Session", "record_event"]
 
 
 class Session:
@@ -32,6 +57,9 @@ class Session:
         self._ticker = Ticker(options.tick_us, options.late_us, closed_us=closed_us)
         fresh = shot is None and not alarms
         self._state: State = first(monitor) if fresh else resume(monitor, shot, alarms or {})
+        self._due: deque[Tick] = deque()  # closed, and not gone through yet
+        self._record = RecordState()
+        self._gap: Gap | None = None  # the silence that the ticks are in, or that is being filled
 
     @property
     def monitor(self) -> Monitor:
@@ -70,17 +98,63 @@ class Session:
         """Apply what people asked for in the next tick, or in the tick at `at_us`."""
         self._ticker.attach_actions(actions, at_us)
 
-    def close(self, now_us: int | None = None) -> list[Outcome]:
-        """Run every tick that may close now; see `Ticker.close`."""
-        return self._run(self._ticker.close(now_us))
+    @property
+    def is_behind(self) -> bool:
+        """Are there closed ticks that `close` has left for the next time?"""
+        return bool(self._due)
+
+    def close(self, now_us: int | None = None, most: int | None = None) -> list[Outcome]:
+        """Run the ticks that may close now, at most so many; see `Ticker.close`."""
+        self._due.extend(self._ticker.close(now_us))
+        return self._run(most)
 
     def finish(self, until_us: int | None = None) -> list[Outcome]:
         """Run what is left at the end; see `Ticker.finish`."""
-        return self._run(self._ticker.finish(until_us))
+        self._due.extend(self._ticker.finish(until_us))
+        return self._run()
 
-    def _run(self, ticks: Iterable[Tick]) -> list[Outcome]:
-        outcomes = []
-        for tick in ticks:
-            self._state, outcome = step(self._monitor, self._state, tick)
-            outcomes.append(outcome)
-        return outcomes
+    def finish_live(self) -> list[Outcome]:
+        """Run what is left at an orderly stop; see `Ticker.finish_live`."""
+        self._due.extend(self._ticker.finish_live())
+        return self._run()
+
+    def _run(self, most: int | None = None) -> list[Outcome]:
+        count = len(self._due) if most is None else min(most, len(self._due))
+        return [self._step(self._due.popleft()) for _ in range(count)]
+
+    def _step(self, tick: Tick) -> Outcome:
+        self._state, outcome = step(self._monitor, self._state, tick)
+        return self._watch_gap(tick, self._watch_record(tick, outcome))
+
+    def _watch_record(self, tick: Tick, outcome: Outcome) -> Outcome:
+        """Raise and clear the alarm about the record itself."""
+        for event in tick.events:
+            if event.event == RECORD_EVENT:
+                self._record = record_state(event)
+        standing = any(alarm == ALARM for alarm, _ in self._state.alarms)
+        if self._record.keeping is Keeping.WELL and not standing:
+            return outcome
+        found = store_failing(self._record)
+        alarms, raised = apply_conditions(dict(self._state.alarms), found, tick)
+        self._state = replace(self._state, alarms=alarms)
+        return replace(outcome, alarm_events=outcome.alarm_events + raised)
+
+    def _watch_gap(self, tick: Tick, outcome: Outcome) -> Outcome:
+        """A silence is a gap while it lasts; a backlog fills it up to where that ends."""
+        if self._state.blind:
+            begun_us = self._state.silent_since_us
+            self._gap = Gap(begun_us, tick.at_us, "no usable reading")
+            return replace(outcome, gaps=(self._gap,))
+        if outcome.gaps:
+            self._gap = outcome.gaps[-1]
+        if self._gap is None or not tick.readings:
+            return outcome
+        if not tick.backlog and not _has_backlog(tick):
+            self._gap = None
+            return outcome
+        self._gap = Gap(self._gap.from_us, tick.at_us, FILLED)
+        return replace(outcome, gaps=(self._gap,))
+
+
+def _has_backlog(tick: Tick) -> bool:
+    return any(reading.flags & Flag.BACKLOG for reading in tick.readings)

@@ -20,6 +20,7 @@ class Flag(IntFlag):
     BACKLOG = 4  # arrived after an outage, used in its own tick
     RETAINED = 8  # last known value of the broker, never live
     MAYBE_DUPLICATE = 16  # redelivered without a source time
+    FUTURE = 32  # stamped further ahead of its arrival than a clock may be; also REFUSED
 
 
 USABLE = Flag.BACKLOG
@@ -46,6 +47,20 @@ class Reading:
 
 
 @dataclass(frozen=True, slots=True)
+class Refused:
+    """One kind of thing that was received and not used, and how often."""
+
+    topic: str
+    channel: str
+    reason: str
+    count: int
+    first_us: int
+    last_us: int
+    detail: str
+    excerpt: str
+
+
+@dataclass(frozen=True, slots=True)
 class Action:
     """What a person asked for, in the order it was written down."""
 
@@ -60,7 +75,10 @@ class Action:
 
 @dataclass(frozen=True, slots=True)
 class BatchEvent:
-    """Something production told us: start, step, load-on, load-off, end."""
+    """Something production told us: start, step, load-on, load-off, end.
+
+    "record" is platewatch's own word on its record, see `monitor.record_room`.
+    """
 
     at_us: int
     event: str
@@ -191,6 +209,9 @@ class FieldShot:
     mean: Array
     cov: Array
     drive: Array
+
+
+FILLED = "filled from backlog"  # a gap whose readings came later
 
 
 @dataclass(frozen=True, slots=True)

@@ -39,7 +39,7 @@ ALLOWED: dict[str, tuple[tuple[str, ...], tuple[str, ...]]] = {
     "thermal": ((*BASIC, "platewatch.thermal"), ("numpy", "scipy", "shapely")),
     "monitor": (CORE, ("numpy", "scipy", "shapely")),
     "session": (("platewatch.types", "platewatch.monitor"), ()),
-    "arrival": (("platewatch.types",), ()),
+    "arrival": (("platewatch.types", "platewatch.clock"), ()),
     "studies": ((*CORE, "platewatch.studies"), ("numpy", "scipy", "shapely")),
     "compose": (("platewatch",), ("numpy",)),
     "daemon": (RUNNING, ()),

@@ -12,52 +12,41 @@ from __future__ import annotations
 
 import contextlib
 import queue
-import ssl
+import socket
 import threading
+import time
 from collections.abc import Iterable, Sequence
-from pathlib import Path
-from typing import Any, NamedTuple
+from typing import Any
 
 from paho.mqtt.client import Client, ConnectFlags, DisconnectFlags, MQTTMessage, MQTTv311
 from paho.mqtt.enums import CallbackAPIVersion
 from paho.mqtt.properties import Properties
 from paho.mqtt.reasoncodes import ReasonCode
 
+from platewatch.adapters.bus_secrets import read_secret, tls_context
+from platewatch.adapters.bus_selftest import Account, session_is_kept
+from platewatch.adapters.bus_values import Arrival, BusEvent, Token
 from platewatch.clock import Clock
 from platewatch.errors import MessageError, SettingsError
+
+__all__ = ["Arrival", "Bus", "BusEvent", "Token"]
 
 ALIVE_EVERY_S = 5.0
 SHORT_CONNECTION_S = 10.0  # ended sooner, it may be another client of our name
 SHORT_IN_A_ROW = 3
+SILENT_AFTER_S = 60.0  # connected, and nothing comes: told once
+RENEW_AFTER_S = 300.0  # then the connection is made anew, at twice the interval each time
 LOCAL_HOSTS = ("127.0.0.1", "::1", "localhost")
 
 
-class Token(NamedTuple):
-    """What acknowledges one message; void after the connection it came on."""
+class _Client(Client):
+    """Notes when its network loop last came round."""
 
-    generation: int
-    mid: int
-    qos: int
+    turned_s = float("-inf")  # of the machine's monotonic clock
 
-
-class Arrival(NamedTuple):
-    """One message exactly as received."""
-
-    topic: str
-    payload: bytes
-    retain: bool
-    dup: bool
-    token: Token
-    seen_us: int
-
-
-class BusEvent(NamedTuple):
-    """what: connected, no broker, refused, subscription refused, lost, taken over,
-    session forgotten, queue full, callback failed, network thread restarted."""
-
-    what: str
-    text: str
-    at_us: int
+    def loop_misc(self) -> Any:
+        self.turned_s = time.monotonic()
+        return super().loop_misc()
 
 
 class Bus:
@@ -67,6 +56,7 @@ class Bus:
     publish: off means that nothing at all is sent, no last will either
     will: what the broker says for us on platewatch/<plate>/alive (retained) when we
     are lost;  secret_file: holds the password alone, readable by its owner only
+    expects_session: an earlier run had one, so the broker should have kept it
 
     `events` holds `BusEvent`s for the daemon to log.  Raises SettingsError for files
     that are missing or too open, and for a password that would travel unencrypted.
@@ -90,6 +80,7 @@ class Bus:
         keepalive_s: int = 30,
         plain_password: bool = False,
         longest_wait_s: int = 30,
+        expects_session: bool = False,
     ) -> None:
         self.host, self.port = host, port or (8883 if ca_file else 1883)
         self.client_name = client_name or f"platewatch-{plate}"
@@ -106,11 +97,14 @@ class Bus:
         self._last_trouble = ""
         self._connected_at = self._last_message = self._last_alive = float("-inf")
         self._short = 0
-        self._ever_connected = False
+        self._expects_session = expects_session
+        self._tested = self._renewing = self._owed = False
+        self._renew_at_s, self._told_silent = RENEW_AFTER_S, False
         self._tls = tls_context(ca_file) if ca_file else None
         self._user, self._will, self._longest_wait_s = user, will, longest_wait_s
         self._password = self._secret(secret_file, plain_password) if user else None
         self._client = self._build()
+        self._account = Account(self.host, self.port, self._tls, user, self._password)
 
     @property
     def connected(self) -> bool:
@@ -124,6 +118,12 @@ class Bus:
     def silence_s(self) -> float:
         """Seconds since the last message; infinite before the first."""
         return self._clock.monotonic() - self._last_message
+
+    def turned_s(self) -> float:
+        """Seconds since the network thread came round; while it waits to try again, none."""
+        if not self._connected and self.thread_alive:
+            return 0.0
+        return time.monotonic() - self._client.turned_s
 
     def start(self) -> None:
         """Begin connecting; needs no broker and keeps trying."""
@@ -144,8 +144,11 @@ class Bus:
         self._connected = False
 
     def watch(self) -> None:
-        """Begin anew if the network thread died; call it about once a second."""
-        if self._stopping or self._thread is None or self._thread.is_alive():
+        """Begin anew if the network thread died or nothing comes; call it once a second."""
+        if self._stopping or self._thread is None:
+            return
+        if self._thread.is_alive():
+            self._watch_flow()
             return
         self._tell("network thread restarted", "it had ended without being asked to")
         self._thread = None
@@ -153,6 +156,41 @@ class Bus:
         self._close_socket()
         self._client = self._build()  # one client whose thread died is not to be trusted
         self.start()
+
+    def _watch_flow(self) -> None:
+        """A connection that brings nothing, or owes what found the queue full, is renewed."""
+        if not self._connected or self._renewing:
+            return
+        if self._owed and self._sink.qsize() <= self._sink.maxsize // 2:
+            self._owed = False
+            self._renew("so that messages which found the queue full come again")
+            return
+        now = self._clock.monotonic()
+        silent_s = now - max(self._last_message, self._connected_at)
+        if silent_s < SILENT_AFTER_S:
+            if self._last_message > self._connected_at:
+                self._told_silent, self._renew_at_s = False, RENEW_AFTER_S
+            return
+        if not self._told_silent:
+            self._told_silent = True
+            self._tell(
+                "silent",
+                f"connected, but no message on {', '.join(self._topics)} for {silent_s:.0f} s; "
+                "does the gateway send, and below that topic?",
+            )
+        if silent_s >= self._renew_at_s:
+            self._renew_at_s *= 2
+            self._renew("because nothing has come on it for so long")
+
+    def _renew(self, why: str) -> None:
+        """Cut the connection; the network thread makes it anew, and what is owed comes again."""
+        line = self._client.socket()
+        if not isinstance(line, socket.socket):
+            return
+        self._renewing = True
+        self._tell("renewed", f"connection made anew, {why}")
+        with contextlib.suppress(OSError):
+            line.shutdown(socket.SHUT_RDWR)
 
     def acknowledge(self, tokens: Iterable[Token]) -> int:
         """Tell the broker that these are safely stored; how many it was told of.
@@ -194,8 +232,8 @@ class Bus:
         if left is not None:
             left.close()
 
-    def _build(self) -> Client:
-        client = Client(
+    def _build(self) -> _Client:
+        client = _Client(
             CallbackAPIVersion.VERSION2,
             client_id=self.client_name,
             clean_session=False,
@@ -250,16 +288,32 @@ class Bus:
             self._last_alive = float("-inf")
             self._last_trouble = ""
             self._tell("connected", f"{self.host}:{self.port} as {self.client_name}")
-            if self._ever_connected and not flags.session_present:
+            if self._expects_session and not flags.session_present:
                 self._tell(
                     "session forgotten",
                     "the broker kept nothing for us; messages may be missing. "
                     "Let it keep persistent sessions",
                 )
-            self._ever_connected = True
+            self._expects_session = True
+            self._renewing = False
             client.subscribe([(topic, 1) for topic in self._topics])
+            if not self._tested:
+                self._tested = True
+                threading.Thread(target=self._test_session, daemon=True).start()
         except Exception as error:  # the thread must live
             self._tell("callback failed", f"on connecting: {error!r}")
+
+    def _test_session(self) -> None:
+        """Does the broker keep sessions at all?  Better known now than after a night."""
+        try:
+            if session_is_kept(self._account, self._topics[0]) is False:
+                self._tell(
+                    "sessions not kept",
+                    f"{self.host}:{self.port} forgets what comes while platewatch is away; "
+                    "switch persistent sessions on (mosquitto: see mosquitto-platewatch.conf)",
+                )
+        except Exception as error:
+            self._tell("callback failed", f"on testing the session: {error!r}")
 
     def _on_connect_fail(self, client: Client, userdata: Any) -> None:
         hint = " or its certificate does not fit ca_file and host" if self._tls is not None else ""
@@ -276,7 +330,7 @@ class Bus:
         try:
             was_connected = self._connected
             self._lost()
-            if was_connected and not self._stopping:
+            if was_connected and not self._stopping and not self._renewing:
                 self._tell("lost", f"{self.host}:{self.port}: {reason}")
                 self._count_short(self._clock.monotonic() - self._connected_at)
         except Exception as error:
@@ -330,6 +384,7 @@ class Bus:
             )
         except queue.Full:
             self.dropped += 1
+            self._owed = self._owed or message.qos > 0
             if self.dropped & (self.dropped - 1) == 0:  # 1, 2, 4, 8, ...
                 self._tell("queue full", f"{self.dropped} messages not taken so far")
         except Exception as error:
@@ -343,30 +398,3 @@ class Bus:
 
     def _tell(self, what: str, text: str) -> None:
         self.events.put(BusEvent(what, text, self._clock.utc_us()))
-
-
-def tls_context(ca_file: str) -> ssl.SSLContext:
-    """TLS 1.2 or newer, the broker's certificate and name always checked."""
-    try:
-        context = ssl.create_default_context(cafile=ca_file)
-    except (OSError, ssl.SSLError) as error:
-        raise SettingsError(f"bus: ca_file {ca_file!r} cannot be used: {error}") from None
-    context.minimum_version = ssl.TLSVersion.TLSv1_2
-    return context
-
-
-def read_secret(secret_file: str) -> str:
-    """The password: the file's first line.  Others must not be able to read it."""
-    path = Path(secret_file)
-    try:
-        mode = path.stat().st_mode
-        lines = path.read_text(encoding="utf-8").splitlines()
-    except (OSError, UnicodeDecodeError) as error:
-        raise SettingsError(f"bus: secret_file {secret_file!r} cannot be read: {error}") from None
-    if mode & 0o077:
-        raise SettingsError(
-            f"bus: secret_file {secret_file!r} is open to other users; chmod 600 {secret_file}"
-        )
-    if not lines or not lines[0].strip():
-        raise SettingsError(f"bus: secret_file {secret_file!r} is empty; put the password into it")
-    return lines[0].strip()

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Protocol
 
 from platewatch import units
@@ -25,6 +25,7 @@ __all__ = [
 
 LARGEST_PAYLOAD = 65_536  # bytes
 FUTURE_US = 120_000_000  # how far a source clock may be ahead of ours
+FURTHEST_KEPT_US = 400 * 86_400_000_000  # a stamp beyond it is no time, so no row
 EXCERPT = 60
 
 READINGS, BATCH = "readings", "batch"
@@ -250,7 +251,7 @@ class Routes:
                 self._judge(arrived, sample, reading)
                 readings.append(reading)
             except Unreadable as error:
-                kept = _kept(reading) if error.reason is Reason.OUT_OF_RANGE else None
+                kept = _kept(reading, arrived, error.reason) if error.reason in _KEPT else None
                 refusals.append(_refusal(arrived, error, sample.name, kept))
         return Decoded(tuple(readings), (), tuple(refusals))
 
@@ -373,14 +374,14 @@ def _in_unit(sample: Sample, unit: str) -> float:
     )
 
 
-def _kept(reading: Reading) -> Reading:
-    return Reading(
-        reading.at_us,
-        reading.channel,
-        reading.value,
-        reading.seen_us,
-        reading.flags | Flag.REFUSED,
-    )
+_KEPT = {Reason.OUT_OF_RANGE: Flag.REFUSED, Reason.FUTURE: Flag.REFUSED | Flag.FUTURE}
+
+
+def _kept(reading: Reading, arrived: _Arrived, reason: Reason) -> Reading | None:
+    """The row of a refused reading; none where its stamp is beyond all sense."""
+    if reading.at_us > arrived.seen_us + FURTHEST_KEPT_US:
+        return None
+    return replace(reading, flags=reading.flags | _KEPT[reason])
 
 
 def _refusal(

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import hashlib
 import os
-import shutil
 import sqlite3
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import AbstractContextManager, contextmanager
@@ -22,10 +21,13 @@ from platewatch.adapters.storage_file import (
     DiskFullError,
     database_path,
     held_alone,
+    is_held,
     open_engine,
     storage_errors,
 )
+from platewatch.adapters.storage_health import Signs, signs_of
 from platewatch.adapters.storage_read import AlarmRow, AppliedAction, Note, Record, Run
+from platewatch.adapters.storage_room import Sizes, give_reserve, keep_reserve, sizes_of
 from platewatch.adapters.storage_seal import (
     check_seals,
     due_days,
@@ -41,9 +43,10 @@ from platewatch.adapters.storage_write import (
     write_note,
     write_outcomes,
     write_readings,
+    write_refusals,
 )
 from platewatch.errors import StorageError
-from platewatch.types import BatchEvent, Outcome, Reading
+from platewatch.types import BatchEvent, Outcome, Reading, Refused
 
 __all__ = [
     "AlarmRow",
@@ -53,6 +56,7 @@ __all__ = [
     "DiskFullError",
     "Note",
     "Run",
+    "Signs",
     "Sizes",
     "Store",
     "Tidied",
@@ -67,15 +71,6 @@ class Written:
 
     readings: int
     duplicates: int
-
-
-@dataclass(frozen=True, slots=True)
-class Sizes:
-    """Bytes of the database, of its write-ahead log, and free on the disk."""
-
-    database: int
-    wal: int
-    free: int
 
 
 class Store(Record):
@@ -149,6 +144,7 @@ class Store(Record):
         readings: Sequence[Reading],
         units: Mapping[str, str],
         events: Sequence[BatchEvent] = (),
+        refusals: Sequence[Refused] = (),
     ) -> Written:
         """Store a batch in one transaction: all of it or nothing.
 
@@ -162,6 +158,7 @@ class Store(Record):
             ids = {name: fresh.get(name) or self._id(plate, name, units) for name in names}
             stored = write_readings(connection, ids, readings)
             write_events(connection, plate, events)
+            write_refusals(connection, plate, refusals)
             run_no, described = self._runs.get(plate, (0, ""))
             write_outcomes(connection, plate, outcomes, described)
             if outcomes:
@@ -256,11 +253,24 @@ class Store(Record):
 
     def sizes(self) -> Sizes:
         """Room used and left; all zero for a record in memory."""
-        if self._path is None:
-            return Sizes(0, 0, 0)
-        wal = self._path.with_name(self._path.name + "-wal")
-        free = shutil.disk_usage(self._path.resolve().parent).free
-        return Sizes(_size(self._path), _size(wal), free)
+        return sizes_of(self._path)
+
+    def keep_reserve(self) -> None:
+        """Hold room back for alarms and peaks, if it can be had; see `storage_room`."""
+        keep_reserve(self._path)
+
+    def give_reserve(self) -> bool:
+        """Give that room to the record; False where there is none any more."""
+        return give_reserve(self._path)
+
+    def signs(self, plate: str, now_us: int) -> Signs:
+        """What tells whether a daemon keeps this record as it should."""
+        with storage_errors(self._path), self._engine.begin() as connection:
+            return signs_of(connection, plate, now_us)
+
+    def is_held(self) -> bool:
+        """Does a daemon hold this record at this moment?"""
+        return is_held(self._path)
 
     def _id(self, plate: str, name: str, units: Mapping[str, str]) -> int:
         return self._ids[plate, name, units.get(name, "")]
@@ -287,7 +297,3 @@ class Store(Record):
     def _writing(self) -> Iterator[Connection]:
         with storage_errors(self._path), self._writer.begin() as connection:
             yield connection
-
-
-def _size(path: Path) -> int:
-    return path.stat().st_size if path.exists() else 0

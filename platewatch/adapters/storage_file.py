@@ -5,9 +5,11 @@ from __future__ import annotations
 import fcntl
 import os
 import sqlite3
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import TextIO
 from urllib.parse import quote
 
 from sqlalchemy import Connection, Engine, QueuePool, StaticPool, create_engine, event, make_url
@@ -17,6 +19,7 @@ from platewatch.adapters.storage_tables import (
     APPLICATION_ID,
     SCHEMA_NUMBER,
     metadata,
+    refusal,
     schema_number,
 )
 from platewatch.errors import StorageError
@@ -97,7 +100,7 @@ def held_alone(path: Path | None) -> Iterator[None]:
     lock = path.with_name(path.name + ".lock")
     with open(lock, "a+", encoding="ascii") as file:
         try:
-            fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            _lock(file)
         except OSError:
             file.seek(0)
             raise StorageError(
@@ -108,6 +111,33 @@ def held_alone(path: Path | None) -> Iterator[None]:
         file.write(f"{os.getpid()}\n")
         file.flush()
         yield
+
+
+def _lock(file: TextIO, tries: int = 5) -> None:
+    """Someone who only looks (`is_held`) has the lock for an instant."""
+    for left in reversed(range(tries)):
+        try:
+            fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            return
+        except OSError:
+            if not left:
+                raise
+            time.sleep(0.05)
+
+
+def is_held(path: Path | None) -> bool:
+    """Does a process hold the lock file at this moment?"""
+    lock = path.with_name(path.name + ".lock") if path is not None else None
+    if lock is None or not lock.exists():
+        return False
+    try:
+        with open(lock, encoding="ascii") as file:
+            fcntl.flock(file, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return True
+    except OSError:
+        return False
+    return False
 
 
 def file_system_of(folder: Path, mounts: str) -> str:
@@ -214,6 +244,9 @@ def _create(engine: Engine) -> None:
             metadata.create_all(connection)
             connection.execute(schema_number.insert(), {"number": SCHEMA_NUMBER})
             connection.exec_driver_sql(f"PRAGMA user_version={SCHEMA_NUMBER}")
+        elif connection.exec_driver_sql("PRAGMA user_version").scalar() == SCHEMA_NUMBER:
+            # Nothing reads this table without asking whether it is there.
+            refusal.create(connection, checkfirst=True)
 
 
 def _check_schema(connection: Connection, path: Path | None) -> None:

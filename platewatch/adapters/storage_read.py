@@ -44,7 +44,7 @@ from platewatch.types import (
     ZonePowerRow,
 )
 
-_FLAGS = {number: Flag(number) for number in range(32)}
+_FLAGS = {number: Flag(number) for number in range(64)}
 _PEAK_OPTIONAL = {"limit_degC", "p_over", "to_limit_s"}
 
 

@@ -253,6 +253,22 @@ batch = Table(
     UniqueConstraint("plate", "at_us", "event", "detail"),
 )
 
+# Dead letters: each kind once, with how often it came.
+refusal = Table(
+    "refusal",
+    metadata,
+    _text("plate"),
+    _text("topic"),
+    _text("channel"),
+    _text("reason"),
+    Column("count", Integer, nullable=False),
+    _time("first_us"),
+    _time("last_us"),
+    _text("detail"),
+    _text("excerpt"),
+    PrimaryKeyConstraint("plate", "topic", "channel", "reason"),
+)
+
 schema_number = Table("schema_number", metadata, Column("number", Integer, primary_key=True))
 
 CHAINS = (person_action, alarm_event, log_note)

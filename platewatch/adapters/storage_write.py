@@ -22,13 +22,29 @@ from platewatch.adapters.storage_tables import (
     log_note,
     peak,
     reading,
+    refusal,
     zone_power,
 )
-from platewatch.types import AlarmEvent, BatchEvent, FieldShot, Outcome, PeakRow, Reading
+from platewatch.types import (
+    FILLED,
+    AlarmEvent,
+    BatchEvent,
+    FieldShot,
+    Outcome,
+    PeakRow,
+    Reading,
+    Refused,
+)
 
 Ids = Mapping[str, int]
 
-_READING = insert_sql(reading)
+# The first value of an instant stays, unless it was refused and a good one comes after it:
+# a source whose clock was ahead and is put right stamps those seconds once more.
+_READING = insert_sql(
+    reading,
+    known="(at_us, channel_id) DO UPDATE SET value = excluded.value, flags = excluded.flags, "
+    "seen_us = excluded.seen_us WHERE reading.flags & 2 AND NOT excluded.flags & 2",
+)
 _PEAK = insert_sql(peak)
 _POWER = insert_sql(zone_power)
 _LIMIT = insert_sql(alarm_limit_probability)
@@ -38,6 +54,14 @@ _SHOT = insert_sql(field_shot)
 _APPLIED = insert_sql(action_applied)
 # A gap that goes on is one row whose end moves.
 _GAP = insert_sql(gap, known="(plate, from_us, what) DO UPDATE SET to_us = excluded.to_us")
+# Kinds that were there already are counted on.
+_REFUSAL = insert_sql(
+    refusal,
+    known="(plate, topic, channel, reason) DO UPDATE SET count = count + excluded.count, "
+    "last_us = excluded.last_us, detail = excluded.detail, excerpt = excluded.excerpt",
+)
+# A gap that a backlog filled is the one that was open before, with another word on it.
+_FILLED = "DELETE FROM gap WHERE plate = ? AND from_us = ? AND what <> ?"
 _BATCH = (
     "INSERT INTO batch (at_us, plate, event, detail) VALUES (?, ?, ?, ?) ON CONFLICT DO NOTHING"
 )
@@ -69,6 +93,14 @@ def write_events(connection: Connection, plate: str, events: Sequence[BatchEvent
     _insert(connection, _BATCH, [(e.at_us, plate, e.event, e.detail) for e in events])
 
 
+def write_refusals(connection: Connection, plate: str, refusals: Sequence[Refused]) -> None:
+    rows = [
+        (plate, r.topic, r.channel, r.reason, r.count, r.first_us, r.last_us, r.detail, r.excerpt)
+        for r in refusals
+    ]
+    _insert(connection, _REFUSAL, rows)
+
+
 def write_outcomes(
     connection: Connection, plate: str, outcomes: Sequence[Outcome], description_sha256: str
 ) -> None:
@@ -97,6 +129,8 @@ def write_outcomes(
     _insert(connection, _SHOT, [_shot_row(plate, shot) for shot in shots])
     gaps = [(plate, g.from_us, g.to_us, g.what) for o in outcomes for g in o.gaps]
     _insert(connection, _GAP, gaps)
+    filled = [(plate, g.from_us, g.what) for o in outcomes for g in o.gaps if g.what == FILLED]
+    _insert(connection, _FILLED, filled)
     _insert(connection, _APPLIED, [(seq, o.at_us) for o in outcomes for seq in o.applied])
     for outcome in outcomes:
         _write_chained(connection, plate, outcome)
