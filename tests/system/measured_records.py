@@ -26,6 +26,7 @@ from platewatch.thermal.grid import build_grid
 from platewatch.thermal.plate import Zone
 from platewatch.thermal.reduction import point_rows, project, reduce, remainder
 from platewatch.types import Array, Tick
+from platewatch.units import from_iso
 
 AHEAD_S = 60.0
 
@@ -127,10 +128,23 @@ def score(
         given.append(carried(quiet, states[i], tick_s, watts[i : i + steps]) - goal)
         held.append(carried(quiet, states[i], tick_s, watts[[i] * steps]) - goal)
         last.append(seen[i] - goal)
-    return Score(_rms(given), _rms(held), _rms(last), len(ticks))
+    return Score(rms(given), rms(held), rms(last), len(ticks))
 
 
-def _rms(errors: Sequence[Array]) -> float:
+def on_ticks(
+    states: Sequence[State], origin: str, at_s: Array, duty: Array, seen: Array
+) -> tuple[Array, Array, Array]:
+    """Times (t,) of the ticks, the duties (t, nz) that hold there and the readings (t, ns)
+    between their stamps, of a record whose stamps lie beside the ticks."""
+    pictures = [state.picture for state in states]
+    stamps = [picture.at_us - from_iso(origin) for picture in pictures if picture is not None]
+    times = np.array(stamps) / 1e6
+    holding = np.maximum(np.searchsorted(at_s, times, side="right") - 1, 0)
+    readings = np.column_stack([np.interp(times, at_s, column) for column in seen.T])
+    return times, duty[holding], readings
+
+
+def rms(errors: Sequence[Array]) -> float:
     return float(np.sqrt(np.mean(np.square(errors))))
 
 
@@ -186,11 +200,15 @@ def fitted(
 
     readings: parameters (p,) to what would be read, of the shape of `seen`
     """
+
+    def misses(logs: Array) -> Array:
+        return np.asarray((readings(np.exp(logs)) - seen).ravel())
+
     found = least_squares(
-        lambda logs: (readings(np.exp(logs)) - seen).ravel(),
+        misses,
         np.log(start),
         bounds=(-12.0, np.log(upper)),
-        diff_step=1e-3,
+        diff_step=[1e-3] * len(start),
         xtol=1e-4,
         ftol=1e-5,
         max_nfev=40,

@@ -11,77 +11,28 @@ from pathlib import Path
 import numpy as np
 import pytest
 from _pytest.capture import CaptureFixture
-from measured_records import described, fitted, recorded, score, simulated, states_of
+from measured_plates import (
+    BOARD,
+    BOARD_COLUMNS,
+    CONE,
+    CONE_COLUMNS,
+    LAMP_COLUMNS,
+    LAMP_PLATE,
+    MACHINE,
+    MACHINE_COLUMNS,
+    NO_CAUSES,
+    START,
+)
+from measured_records import described, fitted, on_ticks, recorded, rms, score, simulated, states_of
 
 from platewatch import compose
 from platewatch.cli import main
-from platewatch.monitor.options import CAUSE_NAMES
 from platewatch.types import Array
 
 Cli = CaptureFixture[str]
-# Naming causes is not asked here, and would take most of the time.
-NO_CAUSES = f"[causes]\noff = {list(CAUSE_NAMES)}\n"
-START = "2026-03-01T08:00:00Z"
 
 pytestmark = pytest.mark.timeout(120)
 
-LAMP_PLATE = """
-[plate]
-name = "lamp-plate"
-outline = {{ shape = "rectangle", width_mm = 100, height_mm = 100 }}
-thickness_mm = 1
-material = "mild steel"
-cell_mm = 10
-[[material]]
-name = "mild steel"
-k = 48.0
-rho = 7850.0
-cp = 490.0
-emissivity = 0.8
-source = "of the size of handbook values"
-[surface.top]
-correlation = "natural-up"
-emissivity = {emissivity}
-ambient = 22.0
-[surface.bottom]
-coefficient = {loss}
-ambient = 22.0
-[[zone]]
-name = "lamp"
-shape = {{ shape = "circle", x_mm = 50, y_mm = 50, diameter_mm = 40 }}
-watts = {watts}
-lag_s = {lag}
-duty = "0..1"
-duty_law = "power"
-duty_exponent = {exponent}
-[[sensor]]
-name = "T1"
-x_mm = 50
-y_mm = 50
-element = "K"
-signal = "degC"
-tolerance_class = "2"
-lag_s = 2
-noise = 0.2
-quantum = 0.244
-[estimator]
-tick_s = 2.0
-"""
-LAMP_COLUMNS = f"""
-delimiter = "whitespace"
-header = false
-[time]
-column = "1"
-format = "s"
-origin = "{START}"
-[[column]]
-column = "2"
-name = "zone/lamp/duty"
-scale = {1 / 9!r}
-[[column]]
-column = "3"
-name = "sensor/T1"
-"""
 LAMP_NAMES = ("emissivity", "loss", "watts", "lag", "exponent")
 LAMP_STEADY_S = 600.0
 
@@ -146,7 +97,7 @@ def test_the_lamp_heated_steel_plate_is_predicted_a_minute_ahead(
 
     values = fitted(read, seen[known], (0.8, 10.0, 40.0, 5.0, 1.5), (1.0, 200.0, 300.0, 60.0, 4.0))
     description = plate_with(values)
-    left = float(np.sqrt(np.mean((read(values) - seen[known]) ** 2)))
+    left = rms([read(values) - seen[known]])
     monitor = compose.build_monitor(description)
     columns = written(tmp_path, "columns.toml", LAMP_COLUMNS)
     states = states_of(monitor, opened(description, log, columns))
@@ -163,58 +114,7 @@ def test_the_lamp_heated_steel_plate_is_predicted_a_minute_ahead(
     assert summary["ticks"] == len(rows)
 
 
-MACHINE = (
-    """
-[plate]
-name = "machine"
-outline = { shape = "rectangle", width_mm = 400, height_mm = 300 }
-thickness_mm = 20
-material = "mild steel"
-cell_mm = 30
-[[material]]
-name = "mild steel"
-k = 48.0
-rho = 7850.0
-cp = 490.0
-emissivity = 0.8
-source = "of the size of handbook values"
-[surface.top]
-coefficient = 15.0
-ambient = 22.0
-[surface.bottom]
-coefficient = 5.0
-ambient = 22.0
-[[zone]]
-name = "Z1"
-shape = { shape = "rectangle", x_mm = 50, y_mm = 50, width_mm = 300, height_mm = 200 }
-watts = 300
-duty = "0..1"
-[[sensor]]
-name = "T1"
-x_mm = 200
-y_mm = 150
-element = "K"
-signal = "degC"
-lag_s = 10
-[estimator]
-tick_s = 600
-late_s = 0
-[forecast]
-horizon_min = 15
-step_s = 450
-every_s = 600
-"""
-    + NO_CAUSES
-)
 COUNTS = ("rows", "stored", "late", "duplicates", "refused", "backward")
-MACHINE_COLUMNS = """
-[time]
-column = "timestamp"
-offset = "Z"
-[[column]]
-column = "value"
-name = "sensor/T1"
-"""
 
 
 def test_every_row_of_the_machine_record_is_stored_or_reported(tmp_path: Path, capfd: Cli) -> None:
@@ -226,7 +126,7 @@ def test_every_row_of_the_machine_record_is_stored_or_reported(tmp_path: Path, c
     eleven of the doubled rows are late, the twelfth is a duplicate in a tick still open.
     """
     log = recorded("nab_machine_temperature/machine_temperature_system_failure.csv")
-    plate = written(tmp_path, "machine.toml", MACHINE)
+    plate = written(tmp_path, "machine.toml", MACHINE + NO_CAUSES)
     columns = written(tmp_path, "columns.toml", MACHINE_COLUMNS)
     told = replayed(capfd, plate, log, columns, tmp_path / "machine.sqlite")
     with capfd.disabled():
@@ -243,3 +143,83 @@ def test_every_row_of_the_machine_record_is_stored_or_reported(tmp_path: Path, c
     with compose.open_store(str(tmp_path / "machine.sqlite"), read_only=True) as store:
         kept = [reading.at_us for reading in store.read_readings("machine")]
     assert len(kept) == len(set(kept)) == 22_683
+
+
+BOARD_NAMES = ("thickness", "k", "loss", "watts_1", "watts_2", "lag")
+
+
+def test_two_heaters_on_a_board_are_predicted_a_minute_ahead(tmp_path: Path, capfd: Cli) -> None:
+    """Two zones and two thermometers: fitted on the first 300 s, then the rest predicted.
+
+    APMonitor/arduino (Apache-2.0), a small board with two transistors as heaters in random
+    steps.  It is no plate, and the fit leaves about what a four-node energy model leaves
+    (0.76 K on T1): that rest is not white, so a third less error than by holding the last
+    value is asked, not the lamp plate's two thirds.  The noise is what the fit leaves.
+    """
+    log = recorded("dual_heater_lab/mimo_3s_random_steps_a.csv")
+    rows = np.loadtxt(log, delimiter=",", skiprows=1)
+    at, duty, seen = rows[:, 0], rows[:, 1:3] / 100, rows[:, 3:5]
+    known, ambient = at < 300.0, float(seen[0].mean())
+
+    def board(values: Array, noise: float = 0.5) -> compose.Description:
+        named = dict(zip(BOARD_NAMES, values.tolist(), strict=True))
+        text = BOARD.format(ambient=ambient, noise=noise, **named)
+        return described(tmp_path, text + NO_CAUSES)
+
+    def read(values: Array) -> Array:
+        return simulated(board(values), at[known], duty[known], ambient)
+
+    begin = (2.0, 20.0, 30.0, 1.5, 1.0, 15.0)
+    values = fitted(read, seen[known], begin, (50.0, 500.0, 500.0, 20.0, 20.0, 60.0))
+    left = rms([read(values) - seen[known]])
+    description = board(values, left)
+    monitor = compose.build_monitor(description)
+    columns = written(tmp_path, "columns.toml", BOARD_COLUMNS)
+    states = states_of(monitor, opened(description, log, columns))
+    times, duty, seen = on_ticks(states, START, at, duty, seen)
+    ticks = range(int(np.searchsorted(times, 300.0)), len(states) - 20)
+    found = score(monitor, states, seen, duty, ticks)
+    with capfd.disabled():
+        print(f"\nboard: fitted on t < 300 s to {left:.2f} K; then {found}")
+    assert found.better >= 1.5
+    assert found.given < found.held
+
+
+CONE_NAMES = ("emissivity", "loss", "watts", "lag")
+
+
+def test_a_plate_under_a_cone_heater_is_predicted_a_minute_ahead(
+    tmp_path: Path, capfd: Cli
+) -> None:
+    """Fitted on the first 120 s under 25 kW/m2, then 60 s ahead while it warms, to 360 s:
+    at least three times better than "hold the last value", as for the lamp.
+
+    NIST, firemodels/exp (SP plate thermometer; 100 x 100 x 0.7 mm of nickel alloy, from
+    memory).  The flux is not a column of the record: it is declared constant, so "given"
+    and "held" are the same, and the end of heating is left out.
+    """
+    source = recorded("plate_thermometer_cone/Plate_TC_25_exp.csv")
+    rows = np.loadtxt(source, delimiter=",", skiprows=1)
+    rows = rows[rows[:, 0] <= 360.0]
+    at, seen, duty = rows[:, 0], rows[:, 1:], np.ones((len(rows), 1))
+    known = at < 120.0
+    lines = "".join(f"{t:.0f},{degC:.1f},1\n" for t, degC in rows)
+    log = written(tmp_path, "cone.csv", "Time,Temp,duty\n" + lines)
+
+    def cone(values: Array) -> compose.Description:
+        named = dict(zip(CONE_NAMES, values.tolist(), strict=True))
+        return described(tmp_path, CONE.format(**named) + NO_CAUSES)
+
+    def read(values: Array) -> Array:
+        return simulated(cone(values), at[known], duty[known], float(seen[0, 0]))
+
+    begin = (0.9, 10.0, 200.0, 3.0)
+    values = fitted(read, seen[known], begin, (1.0, 200.0, 1000.0, 60.0))
+    description = cone(values)
+    monitor = compose.build_monitor(description)
+    columns = written(tmp_path, "columns.toml", CONE_COLUMNS)
+    states = states_of(monitor, opened(description, log, columns))
+    found = score(monitor, states, seen, duty, range(24, len(states) - 12))
+    with capfd.disabled():
+        print(f"\ncone: {dict(zip(CONE_NAMES, values.round(3).tolist(), strict=True))}; {found}")
+    assert found.better >= 3.0
