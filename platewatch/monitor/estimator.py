@@ -42,7 +42,6 @@ MISFIT_MOST = 2.0
 MISFIT_AT_ONCE = 4.0
 # Over a time without ticks the losses are linearised anew this often.
 LONGEST_STEP_US = 120_000_000
-USUAL_TICK_S = 2.0
 # Readings that come back after this long, and miss what is expected of them by about four
 # standard deviations each, tell that the plate was not left alone: start from them.
 FORGET_AFTER_US = 300_000_000
@@ -284,7 +283,7 @@ def first_state(quiet: Quiet, at_us: int, seen: Observed) -> FieldState:
 
 
 def sensitivities(
-    quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array, held_s: float = USUAL_TICK_S
+    quiet: Quiet, a: Array, zone_W: Array, bump: Array, around: Array, held_s: float = 2.0
 ) -> Array:
     """Modal heat (r, PARAMETERS + 1) per unit relative error of conductivity, of losses but
     for radiation, of heat capacity, heater power and emissivity; in the last column the

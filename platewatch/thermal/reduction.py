@@ -88,7 +88,7 @@ def reduce(model: ThermalModel, order: int | None = None, tolerance_K: float = 0
         left_out = missed(model, V, rates, full)
         if left_out <= tolerance_K:
             break
-    quadrature, properties = build_quadrature(model, V), build_properties(model, V)
+    quadrature, properties = build_quadrature(model, V), build_properties(model, V, rates)
     error = left_out
     if quadrature is not None or not model.stack.is_constant:
         error += bend(model, V, rates, quadrature, properties, full)
@@ -128,12 +128,17 @@ def remainder(reduced: ReducedModel, a: Array, u: Array) -> Array:
     return reduced.quadrature.excess(a, u)
 
 
-def property_remainder(reduced: ReducedModel, a: Array, u: Array, adot: Array) -> Array:
-    """What k(T) and cp(T) add to adot (r,) 1/s, the da/dt that includes `remainder`."""
+def property_remainder(
+    reduced: ReducedModel, a: Array, u: Array, adot: Array, held_s: float = 0.0
+) -> Array:
+    """What k(T) and cp(T) add to adot (r,) 1/s, the da/dt that includes `remainder`.
+
+    held_s: how long it will be held, see `Properties.warming`
+    """
     if reduced.properties is None:
         return np.zeros(reduced.order)
     heat = (adot - reduced.properties.conducted(a, u))[:, None]
-    return reduced.properties.warming(a, heat)[:, 0] - adot
+    return reduced.properties.warming(a, heat, held_s)[:, 0] - adot
 
 
 def radiated(reduced: ReducedModel, a: Array, u: Array) -> Array:
