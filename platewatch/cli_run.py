@@ -20,7 +20,23 @@ from platewatch.errors import SettingsError
 
 
 def run(arguments: Namespace) -> int:
-    """Watch plates until told to stop."""
+    """Watch plates until told to stop; SIGHUP reads the descriptions again."""
+    log = open_log(arguments.json_log)
+    with stop_on_signals() as stop, set_on_hangup() as reload:
+        run_daemon(
+            _described(arguments),
+            SystemClock(),
+            log,
+            stop,
+            database=arguments.db,
+            for_s=arguments.for_s,
+            reload=reload,
+            again=lambda: _described(arguments),
+        )
+    return 0
+
+
+def _described(arguments: Namespace) -> list[compose.Description]:
     descriptions = [compose.describe(Path(name)) for name in arguments.plates]
     if arguments.broker:
         descriptions = [compose.with_broker(each, arguments.broker) for each in descriptions]
@@ -28,17 +44,21 @@ def run(arguments: Namespace) -> int:
     twice = next((name for name in names if names.count(name) > 1), "")
     if twice:
         raise SettingsError(f"plate {twice!r} is described twice; give each plate its own name")
-    log = open_log(arguments.json_log)
-    with stop_on_signals() as stop:
-        run_daemon(
-            descriptions,
-            SystemClock(),
-            log,
-            stop,
-            database=arguments.db,
-            for_s=arguments.for_s,
-        )
-    return 0
+    return descriptions
+
+
+@contextmanager
+def set_on_hangup() -> Iterator[threading.Event]:
+    """An event that SIGHUP sets; what the signal did before comes back at the end."""
+    event = threading.Event()
+    if threading.current_thread() is not threading.main_thread():
+        yield event
+        return
+    before = signal.signal(signal.SIGHUP, lambda *_: event.set())
+    try:
+        yield event
+    finally:
+        signal.signal(signal.SIGHUP, before)
 
 
 @contextmanager

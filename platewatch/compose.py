@@ -21,7 +21,7 @@ from platewatch.adapters.messages_send import (
     peak_message,
     topic_of,
 )
-from platewatch.adapters.storage import AlarmRow, Run, Store
+from platewatch.adapters.storage import AlarmRow, DiskFullError, Run, Signs, Sizes, Store
 from platewatch.adapters.tables_out import write_table
 from platewatch.clock import Clock
 from platewatch.compose_plate import (
@@ -45,6 +45,7 @@ __all__ = [
     "BusEvent",
     "Decoded",
     "Description",
+    "DiskFullError",
     "EmbeddedBroker",
     "Field",
     "LogReader",
@@ -54,6 +55,8 @@ __all__ = [
     "Routes",
     "Run",
     "Session",
+    "Signs",
+    "Sizes",
     "Store",
     "Token",
     "alarm_message",
@@ -93,7 +96,13 @@ def build_routes(description: Description) -> Routes:
 
 
 def build_bus(
-    description: Description, routes: Routes, sink: queue.Queue[Arrival], clock: Clock, run: int
+    description: Description,
+    routes: Routes,
+    sink: queue.Queue[Arrival],
+    clock: Clock,
+    run: int,
+    *,
+    expects_session: bool = False,
 ) -> Bus:
     """The connection of one plate; it connects when started."""
     bus = description.bus
@@ -111,6 +120,7 @@ def build_bus(
         publish=bus.publish,
         will=alive_message("lost", clock.utc_us(), run),
         keepalive_s=bus.keepalive_s,
+        expects_session=expects_session,
     )
 
 

@@ -28,15 +28,15 @@ class JsonLines(logging.Formatter):
     """One JSON object a line: at, level, plate, text."""
 
     def format(self, record: logging.LogRecord) -> str:
-        return json.dumps(
-            {
-                "at": iso(round(record.created * 1e6)),
-                "level": record.levelname.lower(),
-                "plate": getattr(record, "plate", ""),
-                "text": record.getMessage(),
-            },
-            ensure_ascii=False,
-        )
+        told = {
+            "at": iso(round(record.created * 1e6)),
+            "level": record.levelname.lower(),
+            "plate": getattr(record, "plate", ""),
+            "text": record.getMessage(),
+        }
+        if record.exc_info:
+            told["trace"] = self.formatException(record.exc_info)
+        return json.dumps(told, ensure_ascii=False)
 
 
 class PlainLines(logging.Formatter):
@@ -46,9 +46,9 @@ class PlainLines(logging.Formatter):
         plate = getattr(record, "plate", "")
         at = self.formatTime(record, "%Y-%m-%d %H:%M:%S")
         head = f"{at} {record.levelname.lower():7}"
-        return (
-            f"{head} {plate}: {record.getMessage()}" if plate else f"{head} {record.getMessage()}"
-        )
+        text = f"{plate}: {record.getMessage()}" if plate else record.getMessage()
+        trace = "\n" + self.formatException(record.exc_info) if record.exc_info else ""
+        return f"{head} {text}{trace}"
 
 
 def open_log(as_json: bool, stream: TextIO | None = None) -> logging.Logger:

@@ -24,7 +24,8 @@ from pathlib import Path
 
 from platewatch import compose
 from platewatch.clock import ScaledClock
-from platewatch.daemon import PlateRun, run_daemon
+from platewatch.daemon import run_daemon
+from platewatch.daemon_plate import PlateRun
 from platewatch.errors import SettingsError, StorageError
 from platewatch.types import AlarmState
 

@@ -87,6 +87,11 @@ class Session:
     def closed_us(self) -> int | None:
         return self._ticker.closed_us
 
+    @property
+    def begun(self) -> bool:
+        """Has the first tick of this run closed?"""
+        return self._ticker.started
+
     def take(self, reading: Reading) -> Reading:
         """Take one reading; the answer is what to store, flagged if it is not used."""
         return self._ticker.add(reading)

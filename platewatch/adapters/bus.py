@@ -23,11 +23,11 @@ from paho.mqtt.enums import CallbackAPIVersion
 from paho.mqtt.properties import Properties
 from paho.mqtt.reasoncodes import ReasonCode
 
-from platewatch.adapters.bus_secrets import read_secret, tls_context
+from platewatch.adapters.bus_secrets import password_of, tls_context
 from platewatch.adapters.bus_selftest import Account, session_is_kept
 from platewatch.adapters.bus_values import Arrival, BusEvent, Token
 from platewatch.clock import Clock
-from platewatch.errors import MessageError, SettingsError
+from platewatch.errors import MessageError
 
 __all__ = ["Arrival", "Bus", "BusEvent", "Token"]
 
@@ -36,7 +36,6 @@ SHORT_CONNECTION_S = 10.0  # ended sooner, it may be another client of our name
 SHORT_IN_A_ROW = 3
 SILENT_AFTER_S = 60.0  # connected, and nothing comes: told once
 RENEW_AFTER_S = 300.0  # then the connection is made anew, at twice the interval each time
-LOCAL_HOSTS = ("127.0.0.1", "::1", "localhost")
 
 
 class _Client(Client):
@@ -102,7 +101,9 @@ class Bus:
         self._renew_at_s, self._told_silent = RENEW_AFTER_S, False
         self._tls = tls_context(ca_file) if ca_file else None
         self._user, self._will, self._longest_wait_s = user, will, longest_wait_s
-        self._password = self._secret(secret_file, plain_password) if user else None
+        self._password = (
+            password_of(user, secret_file, self.host, self._tls, plain_password) if user else None
+        )
         self._client = self._build()
         self._account = Account(self.host, self.port, self._tls, user, self._password)
 
@@ -142,6 +143,13 @@ class Bus:
         self._client.loop_stop()
         self._close_socket()
         self._connected = False
+
+    def abandon(self) -> None:
+        """Cut the connection without a word: the last will speaks, the session stays."""
+        self._stopping = True
+        self._connected = False
+        self._close_socket()
+        self._client.loop_stop()
 
     def watch(self) -> None:
         """Begin anew if the network thread died or nothing comes; call it once a second."""
@@ -257,14 +265,6 @@ class Bus:
         client.on_subscribe = self._on_subscribe
         client.on_message = self._on_message
         return client
-
-    def _secret(self, secret_file: str, plain_password: bool) -> str | None:
-        if self._tls is None and self.host not in LOCAL_HOSTS and not plain_password:
-            raise SettingsError(
-                f"bus: the password of {self._user!r} would travel to {self.host} unencrypted; "
-                "name the broker's ca_file"
-            )
-        return read_secret(secret_file) if secret_file else None
 
     def _on_pre_connect(self, client: Client, userdata: Any) -> None:
         self._thread = threading.current_thread()

@@ -7,6 +7,8 @@ from pathlib import Path
 
 from platewatch.errors import SettingsError
 
+LOCAL_HOSTS = ("127.0.0.1", "::1", "localhost")
+
 
 def tls_context(ca_file: str) -> ssl.SSLContext:
     """TLS 1.2 or newer, the broker's certificate and name always checked."""
@@ -33,3 +35,15 @@ def read_secret(secret_file: str) -> str:
     if not lines or not lines[0].strip():
         raise SettingsError(f"bus: secret_file {secret_file!r} is empty; put the password into it")
     return lines[0].strip()
+
+
+def password_of(
+    user: str, secret_file: str, host: str, tls: ssl.SSLContext | None, plain: bool
+) -> str | None:
+    """The user's password; never to another machine in clear, unless `plain` allows it."""
+    if tls is None and host not in LOCAL_HOSTS and not plain:
+        raise SettingsError(
+            f"bus: the password of {user!r} would travel to {host} unencrypted; "
+            "name the broker's ca_file"
+        )
+    return read_secret(secret_file) if secret_file else None
