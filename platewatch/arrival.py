@@ -134,14 +134,15 @@ class SourceClocks:
             ages = self._ages.get(reading.channel, Ages())
             self._ages[reading.channel] = ages.seen(reading.seen_us - reading.at_us, now_s)
         known_us = self.common.offset_us
-        self.common = self.common.seen(self._typical_us(live[-1].seen_us), now_s)
+        typical_us = self._typical_us(live[-1].seen_us)
+        self.common = self.common.seen(typical_us, now_s)
         found = []
         if back:
             found.append(Skew(-max(back.values()), f"source time of {_named(back)} went back"))
         if self.common.offset_us != known_us:
             found.append(Skew(-self.common.offset_us, "the sources' clock is off"))
             self._told = dict.fromkeys(self._ages, self.common.offset_us)
-        return found + self._apart({r.channel for r in live})
+        return found + self._apart({r.channel for r in live}, typical_us)
 
     def judge(self, readings: Iterable[Reading]) -> list[Reading]:
         """The readings, those that are history flagged as backlog."""
@@ -175,7 +176,7 @@ class SourceClocks:
         self._newest[channel] = reading.at_us
         return newest - reading.at_us
 
-    def _apart(self, channels: set[str]) -> list[Skew]:
+    def _apart(self, channels: set[str], typical_us: int) -> list[Skew]:
         """Single channels whose clock differs from the others', told when it changes."""
         found: dict[int, list[str]] = {}
         for channel in channels:
@@ -186,7 +187,7 @@ class SourceClocks:
         return [
             Skew(-offset_us, f"the clock of {_named(names)} is off")
             for offset_us, names in found.items()
-            if abs(offset_us - self.common.offset_us) > STEADY_US
+            if abs(offset_us - typical_us) > STEADY_US
         ]
 
 

@@ -98,6 +98,7 @@ class Writer:
     def close(self) -> None:
         """After what is under way; the daily upkeep is left where it is, it goes on tomorrow."""
         self._pool.shutdown(wait=True)
+        self.store.give_reserve()
 
     def _measured(self, sizes: compose.Sizes) -> Room:
         if not sizes.database:

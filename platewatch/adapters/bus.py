@@ -4,8 +4,8 @@ What makes it lose nothing at QoS 1: a stable client name with a persistent sess
 and an acknowledgement that the daemon gives only after its commit.  Until then the
 broker keeps the message and sends it again after a break.
 
-The broker limits how many messages may wait for their acknowledgement (mosquitto:
-max_inflight_messages, 20 unless raised).  Commit when the queue runs empty, or raise it.
+The broker limits how many messages may wait for that (mosquitto: max_inflight_messages,
+20 unless raised).  Commit when the queue runs empty.
 """
 
 from __future__ import annotations
@@ -99,6 +99,7 @@ class Bus:
         self._expects_session = expects_session
         self._tested = self._renewing = self._owed = False
         self._renew_at_s, self._told_silent = RENEW_AFTER_S, False
+        self._flowed_s = time.monotonic()  # the machine's, whatever pace the clock has
         self._tls = tls_context(ca_file) if ca_file else None
         self._user, self._will, self._longest_wait_s = user, will, longest_wait_s
         self._password = (
@@ -173,11 +174,8 @@ class Bus:
             self._owed = False
             self._renew("so that messages which found the queue full come again")
             return
-        now = self._clock.monotonic()
-        silent_s = now - max(self._last_message, self._connected_at)
+        silent_s = time.monotonic() - self._flowed_s
         if silent_s < SILENT_AFTER_S:
-            if self._last_message > self._connected_at:
-                self._told_silent, self._renew_at_s = False, RENEW_AFTER_S
             return
         if not self._told_silent:
             self._told_silent = True
@@ -187,7 +185,7 @@ class Bus:
                 "does the gateway send, and below that topic?",
             )
         if silent_s >= self._renew_at_s:
-            self._renew_at_s *= 2
+            self._renew_at_s += 2 * silent_s
             self._renew("because nothing has come on it for so long")
 
     def _renew(self, why: str) -> None:
@@ -285,6 +283,7 @@ class Bus:
                 self._generation += 1
                 self._connected = True
             self._connected_at = self._clock.monotonic()
+            self._flowed_s = self._flowed_s if self._renewing else time.monotonic()
             self._last_alive = float("-inf")
             self._last_trouble = ""
             self._tell("connected", f"{self.host}:{self.port} as {self.client_name}")
@@ -331,7 +330,7 @@ class Bus:
             was_connected = self._connected
             self._lost()
             if was_connected and not self._stopping and not self._renewing:
-                self._tell("lost", f"{self.host}:{self.port}: {reason}")
+                self._tell("lost", f"{self.host}:{self.port}: {reason}; trying again")
                 self._count_short(self._clock.monotonic() - self._connected_at)
         except Exception as error:
             self._tell("callback failed", f"on losing the broker: {error!r}")
@@ -371,6 +370,8 @@ class Bus:
         try:
             self.received += 1
             self._last_message = self._clock.monotonic()
+            self._flowed_s = time.monotonic()
+            self._told_silent, self._renew_at_s = False, RENEW_AFTER_S
             token = Token(self._generation, message.mid, message.qos)
             self._sink.put_nowait(
                 Arrival(
