@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from typing import Any, Protocol
@@ -10,6 +11,8 @@ from typing import Any, Protocol
 from platewatch import units
 from platewatch.adapters import messages_decode as decoding
 from platewatch.adapters.messages_decode import Reason, Sample, Unreadable, Unusable
+from platewatch.adapters.messages_pace import TopicPace
+from platewatch.adapters.messages_units import channel_units, in_unit
 from platewatch.errors import SettingsError
 from platewatch.types import BatchEvent, Flag, Reading
 
@@ -26,7 +29,8 @@ __all__ = [
 LARGEST_PAYLOAD = 65_536  # bytes
 FUTURE_US = 120_000_000  # how far a source clock may be ahead of ours
 FURTHEST_KEPT_US = 400 * 86_400_000_000  # a stamp beyond it is no time, so no row
-EXCERPT = 60
+EXCERPT, LONGEST_NAME, LONGEST_DETAIL = 60, 120, 240  # characters told of each
+MOST_HINTS = 500  # misspelt names that are looked up; more is no mistake of a person
 
 READINGS, BATCH = "readings", "batch"
 EVENTS = ("start", "step", "load-on", "load-off", "end")
@@ -123,12 +127,15 @@ class Routes:
         *,
         largest: int = LARGEST_PAYLOAD,
         future_us: int = FUTURE_US,
+        pace: TopicPace | None = None,
     ) -> None:
         self.plate = plate
         self.units = channel_units(sensors, zones, surrounds, unit)
         self._root = f"plates/{plate}/"
         self._zones = frozenset(zones)
         self._largest, self._future_us = largest, future_us
+        self._pace = pace or TopicPace()
+        self._hints: dict[str, str] = {}
         self._routes: dict[str, Route] = {}
         self._moved: dict[str, str] = {}  # what is mapped -> its topic
         for entry in maps:
@@ -157,9 +164,18 @@ class Routes:
                 raise Unreadable(Reason.TOO_LARGE, size)
             if route is None:
                 raise self._unknown_topic(topic)
-            return self._read(arrived)
+            found = self._read(arrived)
+            self._hold_to_pace(arrived, found)
+            return found
         except Unreadable as error:
             return Decoded(refusals=(_refusal(arrived, error),))
+
+    def _hold_to_pace(self, arrived: _Arrived, found: Decoded) -> None:
+        at_us = max((r.at_us for r in found.readings), default=arrived.seen_us)
+        if not self._pace.allows(arrived.route.topic, arrived.seen_us, at_us):
+            most = self._pace.most_a_second
+            told = f"more than {most:g} a second for a while; let the source send less often"
+            raise Unreadable(Reason.TOO_OFTEN, told)
 
     def _map(self, entry: Mapped) -> None:
         if any(mark in entry.topic for mark in "+#") or not entry.topic:
@@ -237,33 +253,37 @@ class Routes:
             if isinstance(found, Unusable):
                 refusals.append(_refusal(arrived, found.error, channel))
             else:
-                samples.append(Sample(channel, found.value, found.at_us, found.unit))
+                samples.append(replace(found, name=channel))
         if not samples and not refusals and route.value:
             raise Unreadable(Reason.NO_VALUE, f"no record {route.value!r} in the pack")
         judged = self._judge_all(arrived, samples)
         return Decoded(judged.readings, (), (*judged.refusals, *refusals))
 
     def _judge_all(self, arrived: _Arrived, samples: Iterable[Sample]) -> Decoded:
-        readings, refusals = [], []
+        readings: dict[tuple[int, str], Reading] = {}
+        refusals = []
         for sample in samples:
             try:
                 reading = self._reading(arrived, sample)
                 self._judge(arrived, sample, reading)
-                readings.append(reading)
+                key = (reading.at_us, reading.channel)
+                if key in readings:
+                    raise Unreadable(Reason.DOUBLED, f"a second value {reading.value:g}")
+                readings[key] = reading
             except Unreadable as error:
                 kept = _kept(reading, arrived, error.reason) if error.reason in _KEPT else None
                 refusals.append(_refusal(arrived, error, sample.name, kept))
-        return Decoded(tuple(readings), (), tuple(refusals))
+        return Decoded(tuple(readings.values()), (), tuple(refusals))
 
     def _reading(self, arrived: _Arrived, sample: Sample) -> Reading:
         unit = self._unit_of(sample.name)
         flags = Flag.RETAINED if arrived.retain else Flag.NONE
-        if sample.at_us is None and arrived.dup:
+        if arrived.dup and (sample.at_us is None or sample.by_arrival):
             flags |= Flag.MAYBE_DUPLICATE
         return Reading(
             at_us=arrived.seen_us if sample.at_us is None else sample.at_us,
             channel=sample.name,
-            value=_in_unit(sample, unit) if sample.unit else sample.value,
+            value=in_unit(sample, unit) if sample.unit else sample.value,
             seen_us=arrived.seen_us,
             flags=flags,
         )
@@ -285,6 +305,8 @@ class Routes:
             raise Unreadable(
                 Reason.FUTURE, f"{ahead:.0f} s ahead of this machine; set the clock of the source"
             )
+        if not math.isfinite(reading.value):
+            raise Unreadable(Reason.NOT_A_NUMBER, "its parts add up to more than a number holds")
         if not units.plausible(reading.value, unit):
             low, high = units.PLAUSIBLE[unit]
             raise Unreadable(
@@ -310,8 +332,9 @@ class Routes:
         if zone is not None and zone not in self._zones:
             raise Unreadable(Reason.BAD_EVENT, f"zone {zone!r} is not of this plate")
         for key in ("x_mm", "y_mm", "width_mm", "height_mm", "mass_kg"):
-            if found.get(key) is not None:
-                decoding.number_of(found[key], key)
+            given = 0.0 if found.get(key) is None else decoding.number_of(found[key], key)
+            if given < 0 and key not in ("x_mm", "y_mm"):
+                raise Unreadable(Reason.BAD_EVENT, f"{key} is negative")
         if "at" in found:
             at_us = decoding.time_us(found["at"], "iso")
         if at_us is not None and at_us > arrived.seen_us + self._future_us:
@@ -328,50 +351,15 @@ class Routes:
         return Unreadable(reason, f"{channel}{self._did_you_mean(channel)}")
 
     def _did_you_mean(self, name: str) -> str:
-        close = difflib.get_close_matches(name, [*self.units, READINGS, BATCH], 1, 0.6)
-        return f"; did you mean {close[0]}?" if close else ""
+        if len(name) > LONGEST_NAME or (name not in self._hints and self._all_hints_given()):
+            return ""
+        if name not in self._hints:
+            close = difflib.get_close_matches(name, [*self.units, READINGS, BATCH], 1, 0.6)
+            self._hints[name] = f"; did you mean {close[0]}?" if close else ""
+        return self._hints[name]
 
-
-def channel_units(
-    sensors: Mapping[str, str],
-    zones: Mapping[str, float],
-    surrounds: Iterable[str],
-    unit: str,
-) -> dict[str, str]:
-    """Every channel of a plate and its unit, as the `channel` table stores it."""
-    found = {f"sensor/{name}": signal for name, signal in sensors.items()}
-    for name, full in zones.items():
-        found[f"zone/{name}/duty"] = "1" if full == 1 else "%"
-        found[f"zone/{name}/setpoint"] = unit
-    found.update(dict.fromkeys(surrounds, unit))
-    return found
-
-
-_TEMPERATURES = frozenset(str(unit) for unit in units.TemperatureUnit)
-_DUTY_OF = {"/": 1.0, "%": 0.01}
-
-
-def _in_unit(sample: Sample, unit: str) -> float:
-    """A SenML value in the unit of its channel."""
-    if unit in _TEMPERATURES and sample.unit in ("Cel", "K"):
-        given = units.TemperatureUnit("degC" if sample.unit == "Cel" else "K")
-        if given == unit:
-            return sample.value
-        celsius = units.to_degC(sample.value, given)
-        return units.from_degC(celsius, units.TemperatureUnit(unit))
-    if unit in ("1", "%") and sample.unit in _DUTY_OF:
-        if (unit == "%") == (sample.unit == "%"):
-            return sample.value
-        return sample.value * 100 if unit == "%" else sample.value / 100
-    if unit == "mV" and sample.unit == "V":
-        return sample.value * 1000
-    if (unit, sample.unit) == ("ohm", "Ohm"):
-        return sample.value
-    if (unit, sample.unit) == ("mA", "A"):
-        return sample.value * 1000
-    raise Unreadable(
-        Reason.WRONG_UNIT, f"{sample.name} is in {unit}, the record says {sample.unit!r}"
-    )
+    def _all_hints_given(self) -> bool:
+        return len(self._hints) >= MOST_HINTS
 
 
 _KEPT = {Reason.OUT_OF_RANGE: Flag.REFUSED, Reason.FUTURE: Flag.REFUSED | Flag.FUTURE}
@@ -391,4 +379,17 @@ def _refusal(
     excerpt = repr(head) + ("…" if len(arrived.payload) > EXCERPT else "")
     if not channel and arrived.route.means not in (READINGS, BATCH):
         channel = arrived.route.means
-    return Refusal(arrived.route.topic, channel, error.reason, error.detail, excerpt, kept)
+    return Refusal(
+        _told(arrived.route.topic, LONGEST_NAME),
+        _told(channel, LONGEST_NAME),
+        error.reason,
+        _told(error.detail, LONGEST_DETAIL),
+        excerpt,
+        kept,
+    )
+
+
+def _told(text: str, longest: int) -> str:
+    """In one line that nobody can forge: no line ends, no terminal codes, no endless names."""
+    short = text if len(text) <= longest else text[: longest - 1] + "…"
+    return short if short.isprintable() else repr(short)[1:-1]

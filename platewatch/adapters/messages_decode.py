@@ -9,12 +9,15 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
-from enum import StrEnum
 from typing import Any
 
 import msgspec
 
 from platewatch import units
+from platewatch.adapters.messages_reasons import Reason, Unreadable
+from platewatch.adapters.messages_strict import refuse_doubled
+
+__all__ = ["Reason", "Sample", "Unreadable", "Unusable"]
 
 EARLIEST_US = 946_684_800_000_000  # 2000-01-01: an older stamp has the wrong unit
 LATEST_US = 4_102_444_800_000_000  # 2100-01-01, likewise
@@ -22,44 +25,19 @@ SENML_ABSOLUTE_S = 2**28  # RFC 8428 section 4.5.3: below it a time is relative 
 SENML_VERSION = 10
 
 
-class Reason(StrEnum):
-    """Why something was refused; refusals are counted by it."""
-
-    TOO_LARGE = "too large"
-    NOT_JSON = "not valid JSON"
-    NOT_A_NUMBER = "not a number"
-    NO_VALUE = "no value at the declared place"
-    BAD_TIME = "unreadable time"
-    FUTURE = "stamped in the future"
-    OUT_OF_RANGE = "outside the range of its channel"
-    UNKNOWN_CHANNEL = "unknown channel"
-    UNKNOWN_TOPIC = "unknown topic"
-    MAPPED = "mapped to another topic"
-    WRONG_UNIT = "wrong unit"
-    BAD_EVENT = "unreadable batch event"
-    STALE_EVENT = "retained batch event"
-
-
-class Unreadable(Exception):
-    """Internal to the decoding; never leaves `messages`."""
-
-    def __init__(self, reason: Reason, detail: str) -> None:
-        super().__init__(detail)
-        self.reason = reason
-        self.detail = detail
-
-
 @dataclass(frozen=True, slots=True)
 class Sample:
     """One value found in a payload.
 
     at_us: source time, None where the payload has none;  unit: SenML's, else empty
+    by_arrival: its time depends on when it arrived, so a second delivery has another
     """
 
     name: str
     value: float
     at_us: int | None
     unit: str = ""
+    by_arrival: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,13 +62,15 @@ def read_number(payload: bytes) -> float:
 
 
 def read_any(payload: bytes) -> Any:
-    """Any JSON value; strict: no NaN, no Infinity, no number beyond a double."""
+    """Any JSON value; strict: no NaN, no Infinity, no number beyond a double, no name twice."""
     try:
-        return msgspec.json.decode(payload)
+        found = msgspec.json.decode(payload)
     except RecursionError:
         raise Unreadable(Reason.NOT_JSON, "nested too deeply") from None
     except ValueError as error:
         raise Unreadable(Reason.NOT_JSON, str(error)) from None
+    refuse_doubled(payload, found)
+    return found
 
 
 def read_object(payload: bytes) -> dict[str, Any]:
@@ -203,7 +183,6 @@ class _Record(msgspec.Struct):
 
 
 _pack = msgspec.json.Decoder(list[_Record])
-_member_names = msgspec.json.Decoder(list[dict[str, msgspec.Raw]])
 
 
 def read_senml(payload: bytes, seen_us: int) -> list[Sample | Unusable]:
@@ -214,18 +193,18 @@ def read_senml(payload: bytes, seen_us: int) -> list[Sample | Unusable]:
     """
     try:
         records = _pack.decode(payload)
-        if b'_"' in payload:
-            _refuse_must_understand(_member_names.decode(payload))
     except RecursionError:
         raise Unreadable(Reason.NOT_JSON, "nested too deeply") from None
     except msgspec.ValidationError as error:
         raise Unreadable(Reason.NOT_A_NUMBER, f"no SenML pack: {error}") from None
     except ValueError as error:
         raise Unreadable(Reason.NOT_JSON, str(error)) from None
+    # Strict about what the typed decoder passes over.
+    _refuse_must_understand(read_any(payload))
     return list(_resolve(records, seen_us))
 
 
-def _refuse_must_understand(records: list[dict[str, msgspec.Raw]]) -> None:
+def _refuse_must_understand(records: list[dict[str, Any]]) -> None:
     """RFC 8428 section 4.4: an unknown member ending in "_" may not be passed over."""
     for name in (name for record in records for name in record if name.endswith("_")):
         raise Unreadable(Reason.NOT_JSON, f"SenML member {name!r} must be understood and is not")
@@ -270,7 +249,7 @@ def _sample(name: str, base: _Record, record: _Record, v: float, seen_us: int) -
         at_us = time_us(seen_us + round(max(seconds, -1e12) * 1e6), "us")
     value = (base.bv or 0.0) + v
     unit = record.u if record.u is not None else base.bu or ""
-    return Sample(name, value, at_us, unit)
+    return Sample(name, value, at_us, unit, by_arrival=seconds < SENML_ABSOLUTE_S)
 
 
 def _short(value: Any) -> str:
