@@ -125,7 +125,7 @@ def incident_table(runs: Sequence[Run]) -> str:
                 _times(
                     [_since(run, run.trace.sensor_crossed_s(PEAK_LIMIT_DEGC)) for run in chosen]
                 ),
-                f"{min(leads):.0f} / {np.median(leads):.0f}" if leads else "",
+                _leads(leads),
                 f"{max(len(run.trace.raised) for run in chosen)}",
                 f"{max((look.field_K[OURS] for look in _all(chosen)), default=0.0):.1f}",
                 f"{max((look.worst_K for look in _all(chosen)), default=0.0):.1f}",
@@ -165,6 +165,14 @@ def lead_s(run: Run) -> float | None:
     if crossed is None:
         return None
     return crossed - coming if coming is not None else float("-inf")
+
+
+def _leads(leads: Sequence[float]) -> str:
+    """Least and median; a crossing that nothing announced counts as missed."""
+    known = [lead for lead in leads if np.isfinite(lead)]
+    missed = f"{len(leads) - len(known)} missed" if len(known) < len(leads) else ""
+    figures = f"{min(known):.0f} / {np.median(known):.0f}" if known else ""
+    return ", ".join(text for text in (figures, missed) if text)
 
 
 def _all(runs: Iterable[Run]) -> list[Look]:
