@@ -76,7 +76,7 @@ def replay_log(
     wishes: Wishes | None = None,
     told: Told | None = None,
 ) -> Summary:
-    """Replay a wide CSV log or a record into the new record `out`.
+    """Replay a wide log (CSV or Parquet) or a record into the new record `out`.
 
     Raises NoDataError where there is nothing to replay, SettingsError or StorageError
     where the input cannot be read or the output not be written.
@@ -224,7 +224,7 @@ class _Replay:
 
 def _replay_csv(work: _Replay, log: Path, wishes: Wishes, columns: Any, told: Told) -> None:
     reader = compose.read_log(log, work.units, columns=columns, offset=wishes.offset)
-    whole = _count_lines(log)
+    whole = reader.whole
     begun = False
     for number, row in enumerate(reader):
         if row.at_us is not None and _within(row.at_us, wishes):
@@ -246,11 +246,6 @@ def _replay_csv(work: _Replay, log: Path, wishes: Wishes, columns: Any, told: To
     work.summary.reasons.update(dict(report.reasons))
     work.summary.backward = report.backward
     told(whole, whole)
-
-
-def _count_lines(log: Path) -> int:
-    with log.open("rb") as file:
-        return sum(block.count(b"\n") for block in iter(lambda: file.read(1 << 20), b""))
 
 
 def _within(at_us: int, wishes: Wishes) -> bool:

@@ -7,20 +7,17 @@ cell must not change the type of a column, and times stay integers.
 from __future__ import annotations
 
 import csv
-import io
 import json
 import re
 from collections import Counter, deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import IO
 
 from platewatch import units
 from platewatch.adapters.logs_columns import (
     BATCH,
     OWN_TIMES,
-    WHITESPACE,
     ColumnRule,
     ColumnsMap,
     NoOffset,
@@ -31,6 +28,7 @@ from platewatch.adapters.logs_columns import (
     load_columns,
     time_reader,
 )
+from platewatch.adapters.logs_files import open_cells
 from platewatch.errors import NoDataError, SettingsError
 from platewatch.types import BatchEvent, Flag, Reading
 
@@ -90,7 +88,10 @@ class _Column:
 
 
 class LogReader:
-    """Iterates over a log once, in file order; `report` tells what came by so far."""
+    """Iterates over a log once, in file order; `report` tells what came by so far.
+
+    whole: how many rows there are, about
+    """
 
     def __init__(
         self,
@@ -101,17 +102,18 @@ class LogReader:
         ignore_unknown: bool,
     ) -> None:
         self.path = path
-        self._file = _open(path)
+        self._cells = open_cells(path, columns.delimiter if columns else ",")
+        self.whole = self._cells.whole
         try:
             self._layout(channels, columns, offset, ignore_unknown)
         except UnicodeDecodeError:
-            self._file.close()
+            self._cells.close()
             raise SettingsError(f"{path}: not UTF-8 text; save it as CSV in UTF-8") from None
         except csv.Error as error:
-            self._file.close()
+            self._cells.close()
             raise SettingsError(f"{path}: not readable as CSV: {error}") from None
         except Exception:
-            self._file.close()
+            self._cells.close()
             raise
         self._rows = self._readings = self._duplicates = self._backward = self._back_us = 0
         self._last: int | None = None
@@ -120,15 +122,16 @@ class LogReader:
         self._order: deque[int] = deque()
 
     def __iter__(self) -> Iterator[LogRow]:
-        with self._file:
-            try:
-                for cells in self._lines:
-                    if any(cells):
-                        yield self._row(cells, self._line_number())
-            except csv.Error as error:
-                raise SettingsError(f"{self._here()}: not readable as CSV: {error}") from None
-            except UnicodeDecodeError:
-                raise SettingsError(f"{self._here()}: not UTF-8 text") from None
+        try:
+            for cells in self._lines:
+                if any(cells):
+                    yield self._row(cells, self._cells.line())
+        except csv.Error as error:
+            raise SettingsError(f"{self._here()}: not readable as CSV: {error}") from None
+        except UnicodeDecodeError:
+            raise SettingsError(f"{self._here()}: not UTF-8 text") from None
+        finally:
+            self._cells.close()
         if not self._rows:
             raise NoDataError(f"{self.path}: holds a header and no rows")
 
@@ -151,9 +154,8 @@ class LogReader:
         offset: str,
         ignore_unknown: bool,
     ) -> None:
-        delimiter = columns.delimiter if columns else ","
-        self._lines, self._counted = _split(self._file, delimiter)
-        if columns is not None and not columns.header:
+        self._lines = self._cells.rows
+        if columns is not None and not columns.header and not self._cells.named:
             first = next(self._lines, None)
             header = [str(i + 1) for i in range(len(first or ()))]
             self._lines = _again(first, self._lines)
@@ -180,11 +182,8 @@ class LogReader:
             for r in rules
         ]
 
-    def _line_number(self) -> int:
-        return self._counted()
-
     def _here(self) -> str:
-        return f"{self.path}:{self._line_number() + 1}"
+        return f"{self.path}:{self._cells.line() + 1}"
 
     def _row(self, cells: list[str], line: int) -> LogRow:
         self._rows += 1
@@ -258,8 +257,8 @@ def read_log(
     columns: how to read a foreign file;  offset: "+01:00", "Z", ... for stamps without
     ignore_unknown: pass over columns that name no channel instead of refusing the file
 
-    Raises NoDataError for a missing or empty file, SettingsError for one that is no
-    CSV, has doubled or unknown columns or times without an offset.
+    Raises NoDataError for a missing or empty file, SettingsError for one that is neither
+    CSV nor Parquet, has doubled or unknown columns or times without an offset.
     """
     return LogReader(path, channels, columns, offset, ignore_unknown)
 
@@ -288,50 +287,6 @@ def _event(cell: str, at_us: int) -> BatchEvent | str:
         except ValueError as error:
             return f"unreadable time ({error})"
     return BatchEvent(at_us, found["event"], cell)
-
-
-MAGIC = {
-    b"SQLite format 3\0": "a database; replay takes it as it is, without a columns map",
-    b"PAR1": "Parquet; write it as CSV",
-    b"\x1f\x8b": "compressed; unpack it first",
-    b"PK\x03\x04": "a spreadsheet or archive; save the table as CSV",
-}
-
-
-def _open(path: Path) -> IO[str]:
-    try:
-        raw = path.open("rb")
-    except FileNotFoundError:
-        raise NoDataError(f"{path}: no such file") from None
-    except OSError as error:
-        raise NoDataError(f"{path}: cannot be opened: {error.strerror}") from None
-    head = raw.read(4096)
-    raw.seek(0)
-    trouble = next((what for magic, what in MAGIC.items() if head.startswith(magic)), "")
-    if not trouble and b"\0" in head:
-        trouble = "binary or UTF-16; save it as CSV in UTF-8"
-    if trouble or not head.strip():
-        raw.close()
-        if trouble:
-            raise SettingsError(f"{path}: is {trouble}")
-        raise NoDataError(f"{path}: is empty")
-    return io.TextIOWrapper(raw, encoding="utf-8-sig", newline="")
-
-
-def _split(file: IO[str], delimiter: str) -> tuple[Iterator[list[str]], Callable[[], int]]:
-    """The cells of each line, and the number of the line read last."""
-    if delimiter != WHITESPACE:
-        reader = csv.reader(file, delimiter=delimiter)
-        return reader, lambda: reader.line_num
-    count = 0
-
-    def rows() -> Iterator[list[str]]:
-        nonlocal count
-        for line in file:
-            count += 1
-            yield line.split()
-
-    return rows(), lambda: count
 
 
 def _again(first: list[str] | None, rest: Iterator[list[str]]) -> Iterator[list[str]]:

@@ -128,7 +128,7 @@ def test_steps_back_and_doubled_stamps_are_counted_and_kept_in_order(tmp_path: P
         (b" \n", NoDataError, "is empty"),
         (b"at,sensor/T1\n", NoDataError, "header and no rows"),
         (b"SQLite format 3\0....", SettingsError, "is a database"),
-        (b"PAR1xxxx", SettingsError, "is Parquet"),
+        (b"PAR1xxxx", SettingsError, "not readable as Parquet"),
         (b"\x1f\x8b\x08", SettingsError, "unpack it first"),
         (b"PK\x03\x04zip", SettingsError, "save the table as CSV"),
         (b"\x7fELF\0\0", SettingsError, "is binary"),
