@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import astuple, dataclass, fields
-from itertools import chain, groupby
+from itertools import chain
 from pathlib import Path
 from typing import TypeVar
 
@@ -32,33 +32,21 @@ class Wish:
 
 
 def readings(store: compose.Store, wish: Wish) -> int:
-    """The readings that were used, as the wide log that `replay` reads."""
-    if wish.out.suffix == ".parquet":
-        return _wide_table(store, wish)
-    return compose.write_wide_log(
-        wish.out,
-        _some(_used(store, wish), wish),
-        channels=sorted(store.units(wish.plate)),
-        events=store.events(wish.plate, wish.from_us, wish.to_us),
-    )
+    """The readings that were used and the batch events, as the wide log that `replay` reads."""
+    used = _some(_used(store, wish), wish)
+    channels = sorted(store.units(wish.plate))
+    events = list(store.events(wish.plate, wish.from_us, wish.to_us))
+    if wish.out.suffix == ".csv":
+        return compose.write_wide_log(wish.out, used, channels=channels, events=events)
+    names = ["at_us", *channels, *(["batch"] if events else [])]
+    kinds: list[type] = [int, *[float] * len(channels), *([str] if events else [])]
+    rows = ([row.get(name) for name in names] for row in compose.wide_rows(used, events))
+    return compose.write_table(wish.out, names, rows, kinds)
 
 
 def _used(store: compose.Store, wish: Wish) -> Iterator[Reading]:
     found = store.read_readings(wish.plate, wish.from_us, wish.to_us)
     return (reading for reading in found if reading.usable)
-
-
-def _wide_table(store: compose.Store, wish: Wish) -> int:
-    channels = sorted(store.units(wish.plate))
-    kinds: list[type] = [int, *[float] * len(channels)]
-
-    def rows() -> Iterator[list[object]]:
-        used = _some(_used(store, wish), wish)
-        for at_us, group in groupby(used, key=lambda reading: reading.at_us):
-            values = {reading.channel: reading.value for reading in group}
-            yield [at_us, *(values.get(name) for name in channels)]
-
-    return compose.write_table(wish.out, ["at_us", *channels], rows(), kinds)
 
 
 def peaks(store: compose.Store, wish: Wish) -> int:

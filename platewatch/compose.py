@@ -12,7 +12,7 @@ import numpy as np
 from platewatch.adapters.broker import EmbeddedBroker
 from platewatch.adapters.bus import Arrival, Bus, BusEvent, Token
 from platewatch.adapters.logs import LogReader, LogReport, load_columns, read_log
-from platewatch.adapters.logs_write import write_wide_log
+from platewatch.adapters.logs_write import wide_rows, write_wide_log
 from platewatch.adapters.messages import Decoded, Refusal, Routes
 from platewatch.adapters.messages_send import (
     alarm_message,
@@ -73,6 +73,7 @@ __all__ = [
     "read_log",
     "resume_session",
     "topic_of",
+    "wide_rows",
     "with_broker",
     "with_limits",
     "write_table",
