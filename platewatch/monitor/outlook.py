@@ -84,12 +84,22 @@ class Means:
 
 
 def look_ahead(
-    means: Means, field: FieldState, start: LoopStart, views: Sequence[View], p_none: float
+    means: Means,
+    field: FieldState,
+    start: LoopStart,
+    views: Sequence[View],
+    p_none: float,
+    missed: Array | None = None,
 ) -> Ahead:
-    """Every credible prospect, and their average."""
-    prospects = [_prospect(means, replace_belief(field, v), start, v) for v in views]
+    """Every credible prospect, and their average.
+
+    missed (cells,): K to add to the field whatever the cause
+    """
+    prospects = [
+        _prospect(means, replace_belief(field, v), start, v, v.probability, missed) for v in views
+    ]
     if p_none >= CREDIBLE or not prospects:
-        prospects.append(_prospect(means, field, start, None, p_none))
+        prospects.append(_prospect(means, field, start, None, p_none, missed))
     prospects.sort(key=lambda p: -p.probability)
     regions = {
         r: mixed([(p.probability, p.ahead[r]) for p in prospects]) for r in means.where.regions
@@ -108,10 +118,12 @@ def _prospect(
     field: FieldState,
     start: LoopStart,
     view: View | None,
-    probability: float | None = None,
+    probability: float,
+    missed: Array | None,
 ) -> Prospect:
     quiet, where = means.quiet, means.where
-    missed = None if view is None else view.missed
+    if view is not None:
+        missed = view.missed if missed is None else view.missed + missed
     X = state_draws(field, means.draws)
     if view is not None:
         X[quiet.blocks.beta] += view.reading_error[:, None]
@@ -128,7 +140,7 @@ def _prospect(
         )
     return Prospect(
         view=view,
-        probability=view.probability if view is not None else (probability or 0.0),
+        probability=probability,
         now=present(means, field.belief, missed),
         ahead={r: h for r, (h, _) in regions.items()},
         passing=passing,

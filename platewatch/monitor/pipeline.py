@@ -6,16 +6,16 @@ The daemon and the replay run this same function; only where ticks come from dif
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 
 from platewatch.monitor import conditions as ask
 from platewatch.monitor import verdicts
-from platewatch.monitor.alarms import Alarm, Condition
+from platewatch.monitor.alarms import Condition
 from platewatch.monitor.annunciate import apply_actions, apply_conditions
 from platewatch.monitor.causes import layer
-from platewatch.monitor.causes.settled import left_out, without
+from platewatch.monitor.causes.settled import left_out, missed_now, without
 from platewatch.monitor.causes.views import View
-from platewatch.monitor.conditions import Estimate, Words
+from platewatch.monitor.conditions import Estimate
 from platewatch.monitor.control import integrals, loop_start
 from platewatch.monitor.estimator import (
     FORGET_AFTER_US,
@@ -29,16 +29,13 @@ from platewatch.monitor.estimator import (
     restarted,
 )
 from platewatch.monitor.forecast import horizon_times
-from platewatch.monitor.inputs import Heard, nothing_heard, take_in
-from platewatch.monitor.limits import AlarmLimit, LimitKind
-from platewatch.monitor.loops import Loops
-from platewatch.monitor.options import EstimatorOptions, ForecastOptions
-from platewatch.monitor.outlook import Ahead, Means, Prospect, look_ahead, now_of, present, worst_of
-from platewatch.monitor.peak import WHOLE_PLATE, Hottest, Places
-from platewatch.monitor.recipe import Recipe
-from platewatch.monitor.shots import field_of, power_rows, shot_of
+from platewatch.monitor.inputs import take_in
+from platewatch.monitor.limits import AlarmLimit
+from platewatch.monitor.outlook import Prospect, look_ahead, now_of, present, worst_of
+from platewatch.monitor.peak import WHOLE_PLATE, Hottest
+from platewatch.monitor.shots import power_rows, shot_of
+from platewatch.monitor.watched import Monitor, State, first, resume
 from platewatch.types import (
-    AlarmState,
     Array,
     CauseRow,
     FieldShot,
@@ -49,7 +46,6 @@ from platewatch.types import (
     Tick,
     ZonePowerRow,
 )
-from platewatch.units import TemperatureUnit
 
 ZONE_POWER_EVERY_US = 10_000_000
 SHOT_EVERY_US = 60_000_000
@@ -59,85 +55,7 @@ NEAR_LIMIT_K = 20.0
 CAUSES_EVERY_US = 10_000_000
 
 
-@dataclass(frozen=True)
-class Monitor:
-    """Everything about one plate that does not change from tick to tick."""
-
-    quiet: Quiet
-    loops: Loops
-    where: Places
-    draws: Array
-    limits: tuple[AlarmLimit, ...]
-    recipes: tuple[Recipe, ...]
-    estimator: EstimatorOptions
-    forecast: ForecastOptions
-    unit: TemperatureUnit
-    causes: layer.Model | None = None
-
-    @property
-    def words(self) -> Words:
-        return Words(self.quiet.plate, self.unit)
-
-    @property
-    def means(self) -> Means:
-        """What looking ahead needs."""
-        return Means(
-            self.quiet, self.loops, self.where, self.draws, self.peak_limits, self.forecast
-        )
-
-    @property
-    def peak_limits(self) -> tuple[AlarmLimit, ...]:
-        return ask.enabled(self.limits, LimitKind.PEAK)
-
-    @property
-    def shown_limit(self) -> AlarmLimit | None:
-        """The lowest enabled peak limit, which peak rows refer to."""
-        alarming = [limit for limit in self.peak_limits if not limit.record_only]
-        return min(alarming or self.peak_limits, key=lambda limit: limit.value, default=None)
-
-
-@dataclass(frozen=True)
-class State:
-    """What one plate carries from tick to tick.  `picture` is None before the first reading."""
-
-    heard: Heard
-    picture: FieldState | None = None
-    ahead: Ahead | None = None
-    alarms: Mapping[tuple[str, str], Alarm] = field(default_factory=dict)
-    started_us: int = 0
-    settled: bool = False
-    silent_since_us: int = 0
-    blind: bool = False
-    shot_us: int = 0
-    power_us: int = 0
-    integral: Array | None = None  # (nz,) of the controllers, nan where not known
-    causes: layer.State | None = None
-    causes_us: int = 0
-    question: str = ""
-
-
-def first(monitor: Monitor) -> State:
-    """Before anything was heard."""
-    return State(nothing_heard(monitor.quiet))
-
-
-def resume(
-    monitor: Monitor, shot: FieldShot | None, alarms: Mapping[tuple[str, str], AlarmState]
-) -> State:
-    """After a restart: the last stored field, if it fits the description, and the alarms."""
-    state = replace(first(monitor), alarms={key: Alarm(s) for key, s in alarms.items()})
-    kept = field_of(monitor.quiet, shot)
-    if kept is None:
-        return state
-    picture, duty = kept
-    return replace(
-        state,
-        picture=picture,
-        heard=replace(state.heard, around=picture.around, duty=duty),
-        started_us=picture.at_us,
-        silent_since_us=picture.at_us,
-        settled=True,
-    )
+__all__ = ["Monitor", "State", "first", "resume", "step"]
 
 
 def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
@@ -162,7 +80,7 @@ def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
     state, gaps = _see(monitor, state, tick, seen)
     state = _attend(monitor, state, before, tick, seen)
     assert state.picture is not None
-    fresh = present(monitor.means, state.picture.belief)
+    fresh = present(monitor.means, state.picture.belief, _missed(state))
     state = _settle(state, tick, fresh[WHOLE_PLATE])
     if _forecast_due(monitor, state, tick):
         state = _look(monitor, state)
@@ -220,7 +138,7 @@ def _begun(monitor: Monitor, state: State, tick: Tick, seen: Observed) -> State:
     """The picture made from this tick's readings alone."""
     at_us = tick.at_us
     picture = first_state(monitor.quiet, at_us, seen)
-    anew = replace(state, picture=picture, settled=False, ahead=None)
+    anew = replace(state, picture=picture, settled=False, ahead=None, causes=None)
     return replace(anew, started_us=at_us, silent_since_us=at_us)
 
 
@@ -254,8 +172,7 @@ def _attend(
     causes = state.causes or layer.State(tuple(range(len(monitor.quiet.plate.sensors))))
     causes = layer.take_evidence(model, causes, tick)
     if not seen.sensors:
-        idle = layer.State(causes.sensors, answer=causes.answer, settled=causes.settled)
-        return replace(state, causes=idle)
+        return replace(state, causes=replace(causes, watch=None, seen=None, past=(), views=()))
     dt_us = tick.at_us - before.at_us
     return replace(state, causes=layer.attend(model, causes, before, dt_us, seen))
 
@@ -267,11 +184,22 @@ def _look(monitor: Monitor, state: State) -> State:
     views: tuple[View, ...] = ()
     if monitor.causes is not None and causes is not None:
         causes = layer.explain(monitor.causes, causes, state.picture, times)
+        causes, picture = layer.settle(monitor.causes, causes, state.picture)
+        state = replace(state, picture=picture)
         views, p_none = causes.views, causes.p_none
+    assert state.picture is not None
     start = loop_start(monitor.loops, monitor.recipes, times, state.heard, state.integral)
-    ahead = look_ahead(monitor.means, state.picture, start, views, p_none)
+    missed = _missed(state)
+    ahead = look_ahead(monitor.means, state.picture, start, views, p_none, missed)
     question = verdicts.question(monitor.words, ahead.prospects)
     return replace(state, causes=causes, ahead=ahead, question=question)
+
+
+def _missed(state: State) -> Array | None:
+    """(cells,) K beyond the modes that settled causes have left."""
+    if state.causes is None or state.picture is None:
+        return None
+    return missed_now(state.causes.settled, state.picture.at_us)
 
 
 def _settled(state: State) -> tuple[Prospect, ...]:

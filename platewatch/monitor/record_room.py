@@ -23,7 +23,6 @@ class Keeping(StrEnum):
     """How the record is being kept, from good to bad."""
 
     WELL = "well"
-    LITTLE_ROOM = "little room"
     FAILING = "failing"  # nothing is acknowledged, so the broker keeps what is not stored
     LOSING = "losing"  # only this program's memory has it, or nothing
 
@@ -33,15 +32,25 @@ class RecordState:
     """free_MB, days_left: room on the disk of the record; why: what the database said"""
 
     keeping: Keeping = Keeping.WELL
+    little_room: bool = False
     free_MB: float | None = None
     days_left: float | None = None
     why: str = ""
+
+    @property
+    def is_well(self) -> bool:
+        return self.keeping is Keeping.WELL and not self.little_room
+
+    def says_other_than(self, before: RecordState) -> bool:
+        """Is this worth telling after `before`?"""
+        return (self.keeping, self.little_room) != (before.keeping, before.little_room)
 
 
 def record_event(state: RecordState) -> BatchEvent:
     """To be given to the ticker, which stamps it with the time at which it acts."""
     detail = {
         "keeping": state.keeping.value,
+        "little_room": state.little_room,
         "free_MB": state.free_MB,
         "days_left": state.days_left,
         "why": state.why,
@@ -54,18 +63,23 @@ def record_state(event: BatchEvent) -> RecordState:
     try:
         found = json.loads(event.detail)
         return RecordState(
-            Keeping(found["keeping"]), found["free_MB"], found["days_left"], str(found["why"])
+            Keeping(found["keeping"]),
+            bool(found["little_room"]),
+            found["free_MB"],
+            found["days_left"],
+            str(found["why"]),
         )
     except (ValueError, KeyError, TypeError):
         return RecordState()
 
 
 def store_failing(state: RecordState) -> list[Condition]:
-    """Two instances: the record itself (low), and readings that get lost (medium)."""
-    bad = state.keeping is not Keeping.WELL
+    """Three instances: room and record (low), and readings that get lost (medium)."""
+    failing = state.keeping is not Keeping.WELL
     losing = state.keeping is Keeping.LOSING
     return [
-        _condition("record", Priority.LOW, bad, _record_text(state), state.free_MB),
+        _condition("room", Priority.LOW, state.little_room, _room_text(state), state.free_MB),
+        _condition("record", Priority.LOW, failing, _record_text(state), None),
         _condition("readings", Priority.MEDIUM, losing, _readings_text(state), None),
     ]
 
@@ -85,13 +99,15 @@ def _condition(
     )
 
 
+def _room_text(state: RecordState) -> str:
+    days = "" if state.days_left is None else f", enough for {_days(state.days_left)}"
+    return (
+        f"Room for the record is running out: {state.free_MB or 0:.0f} MB free{days}. "
+        "Make room on its disk; platewatch tidy removes what is past its keeping time."
+    )
+
+
 def _record_text(state: RecordState) -> str:
-    if state.keeping is Keeping.LITTLE_ROOM:
-        days = "" if state.days_left is None else f", enough for {_days(state.days_left)}"
-        return (
-            f"Room for the record is running out: {state.free_MB or 0:.0f} MB free{days}. "
-            "Make room on its disk; platewatch tidy removes what is past its keeping time."
-        )
     return (
         f"The record cannot be written: {state.why}. Readings wait at the broker; alarms and "
         "peaks are kept as long as there is any room. The plate is still watched."

@@ -16,8 +16,12 @@ from platewatch.monitor.causes.catalogue import Cause, Family
 from platewatch.monitor.causes.refine import FAMILY_OF
 from platewatch.monitor.causes.views import View
 from platewatch.monitor.estimator import FieldState, Observed, Quiet
-from platewatch.types import Array
+from platewatch.types import Array, Gaussian
 
+DOUBT = 0.2  # share of the change that may be wrong
+LEFT_OVER_K = 1.0  # and this much anywhere
+SPREAD_S = 900.0  # what the modes miss of heat that has ended fades like this
+HEATING = (Family.SOURCE, Family.LOSS, Family.ZONE)
 RETURN_SD = 3.0  # a left-out thermocouple is heard again when it agrees this well
 RETURN_US = 180_000_000  # for this long
 OVER_SHARE = 0.1  # of a zone's watts: below this a settled heater fault is over
@@ -29,13 +33,11 @@ class Settled:
     """One settled cause.
 
     view: as it was when it settled;  since_us: when that was
-    missed (cells,): K that the modes miss of its lasting heat
     agrees_us: since when its thermocouple has agreed with the field, 0 when it does not
     """
 
     view: View
     since_us: int
-    missed: Array
     agrees_us: int = 0
 
     @property
@@ -52,15 +54,31 @@ def adopt(field: FieldState, view: View, quiet: Quiet) -> tuple[FieldState, Sett
     k = quiet.blocks
     mean = view.belief.mean.copy()
     extra = np.zeros(k.modes) if field.extra is None else field.extra
-    for cause, subject in view.parts:
-        if FAMILY_OF[cause] is Family.ZONE:
-            number = [z.name for z in quiet.plate.zones].index(subject)
-            mean[k.d.start + number] += view.watts
-    if any(FAMILY_OF[cause] in (Family.SOURCE, Family.LOSS) for cause, _ in view.parts):
+    if any(FAMILY_OF[cause] in HEATING for cause, _ in view.parts):
         extra = extra + view.lasting
-    share = view.lasting_share
-    moved = replace(field, belief=replace(view.belief, mean=mean), misfit=1.0, extra=extra)
-    return moved, Settled(view, field.at_us, view.missed * share)
+    change = mean - field.belief.mean
+    cov = view.belief.cov + (DOUBT**2) * np.outer(change, change)
+    cov[k.a, k.a] += LEFT_OVER_K**2 * np.eye(k.modes) * mean_square_mode(quiet)
+    moved = replace(field, belief=Gaussian(mean, cov), misfit=1.0, extra=extra)
+    return moved, Settled(view, field.at_us)
+
+
+def missed_now(settled: Sequence[Settled], at_us: int) -> Array | None:
+    """(cells,) K that the modes miss of settled heat: what lasts stays, the rest spreads."""
+    total: Array | None = None
+    for each in settled:
+        if FAMILY_OF[each.view.cause] not in HEATING or not each.view.missed.any():
+            continue
+        gone_s = (at_us - each.since_us) / 1e6
+        share = each.view.lasting_share
+        part = each.view.missed * (share + (1 - share) * float(np.exp(-gone_s / SPREAD_S)))
+        total = part if total is None else total + part
+    return total
+
+
+def mean_square_mode(quiet: Quiet) -> float:
+    """Modal amplitude squared that stands for 1 K^2 on average over the plate."""
+    return float(quiet.reduced.V.shape[0] / np.square(quiet.reduced.V).sum())
 
 
 def left_out(settled: Sequence[Settled], quiet: Quiet) -> frozenset[int]:
@@ -102,7 +120,7 @@ def _review(each: Settled, quiet: Quiet, field: FieldState, seen: Observed) -> S
     if family is Family.ZONE:
         zone = quiet.plate.zone(each.view.subject)
         number = [z.name for z in quiet.plate.zones].index(zone.name)
-        beyond = field.belief.mean[quiet.blocks.d.start + number]
+        beyond = each.view.watts + field.belief.mean[quiet.blocks.d.start + number]
         sign = 1.0 if each.view.cause is Cause.ZONE_STAYS_ON else -1.0
         return each if sign * beyond >= OVER_SHARE * zone.watts else None
     return each if field.at_us - each.since_us < OVER_US else None

@@ -19,7 +19,7 @@ from platewatch.monitor.estimator import Quiet
 from platewatch.thermal.reduction import flux_modes
 from platewatch.types import Array
 
-WINDOW_S = 900.0
+WINDOW_S = 1080.0
 Float32 = NDArray[np.float32]
 
 

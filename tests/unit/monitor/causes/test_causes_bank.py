@@ -13,7 +13,14 @@ from platewatch.adapters.settings import load
 from platewatch.compose import build_monitor
 from platewatch.monitor.causes import layer
 from platewatch.monitor.causes.catalogue import Cause, Family, Shape, cause_of, patterns
-from platewatch.monitor.causes.evidence import Watch, log_evidence, observe
+from platewatch.monitor.causes.evidence import (
+    Watch,
+    begin,
+    findings,
+    groups_of,
+    log_evidence,
+    observe,
+)
 from platewatch.monitor.causes.refine import Evidence, columns_of, fit, reads_low
 from platewatch.monitor.causes.sentinel import Sentinel, build_sentinel, steady_prior
 from platewatch.monitor.causes.signatures import Bank, build_bank, shaped
@@ -140,14 +147,14 @@ def test_nothing_found_on_noise_alone() -> None:
     _, sentinel, bank = _parts()
     rng = np.random.default_rng(3)
     mean = np.zeros(len(sentinel.F))
-    watch = layer.begin(bank, mean, 2.0)
+    watch = begin(bank, mean, 2.0)
     seen = []
     root = np.linalg.inv(sentinel.whiten)
     for _ in range(450):
         z = sentinel.H @ (sentinel.F @ watch.mean) + root @ rng.standard_normal(9)
         watch, v = observe(sentinel, bank, watch, np.zeros(len(mean)), z, 2.0)
         seen.append(v)
-    found, p_none = layer.findings(bank, watch, CauseOptions(), 2.0)
+    found, p_none = findings(bank, watch, groups_of(bank, CauseOptions()), 2.0)
     assert p_none > 0.99
     assert max(f.probability for f in found) < 0.01
 
