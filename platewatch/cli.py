@@ -18,6 +18,7 @@ MODULES = {
     "demo": "platewatch.cli_run",
     "replay": "platewatch.cli_run",
     "alarms": "platewatch.cli_record",
+    "answer": "platewatch.cli_record",
     "export": "platewatch.cli_record",
     "verify": "platewatch.cli_record",
     "backup": "platewatch.cli_record",

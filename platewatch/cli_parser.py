@@ -41,7 +41,19 @@ def build_parser() -> Parser:
     )
     parser.add_argument("--version", action="version", version=f"platewatch {__version__}")
     commands = parser.add_subparsers(dest="command", metavar="COMMAND", required=True)
-    for add in (_check, _run, _demo, _replay, _whatif, _alarms, _export, _verify, _backup, _tidy):
+    for add in (
+        _check,
+        _run,
+        _demo,
+        _replay,
+        _whatif,
+        _alarms,
+        _answer,
+        _export,
+        _verify,
+        _backup,
+        _tidy,
+    ):
         add(commands)
     return parser
 
@@ -63,6 +75,7 @@ COMMANDS = (
     "replay",
     "whatif",
     "alarms",
+    "answer",
     "export",
     "verify",
     "backup",
@@ -198,12 +211,12 @@ def _alarms(commands: Commands) -> None:
     parser = _command(
         commands,
         "alarms",
-        "list the alarms of a record, or acknowledge one",
+        "list the alarms of a record, acknowledge one, or reset a latched one",
         'alarms ack peak-coming product --person "early shift" --db table-1.sqlite',
     )
     parser.add_argument(
         "words",
-        metavar="PLATE.toml | ack ALARM SUBJECT",
+        metavar="PLATE.toml | ack ALARM SUBJECT | reset ALARM SUBJECT",
         nargs="*",
         help="whose record, or what to acknowledge",
     )
@@ -213,6 +226,21 @@ def _alarms(commands: Commands) -> None:
     parser.add_argument("--person", default="", help="who acknowledges")
     parser.add_argument("--reason", default="")
     _json(parser)
+
+
+def _answer(commands: Commands) -> None:
+    parser = _command(
+        commands,
+        "answer",
+        "answer the open question of a plate; evidence for it, never a verdict",
+        'answer table-1.toml yes --person "early shift"',
+    )
+    parser.add_argument("plate_file", metavar="PLATE.toml", nargs="?", default="")
+    parser.add_argument("said", choices=("yes", "no", "withdraw"))
+    parser.add_argument("--db", metavar="FILE", default="")
+    parser.add_argument("--plate", metavar="NAME", default="", help="where a record holds several")
+    parser.add_argument("--person", default="", help="who answers")
+    parser.add_argument("--reason", default="")
 
 
 def _export(commands: Commands) -> None:

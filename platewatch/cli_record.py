@@ -20,15 +20,28 @@ STATE_WORDS = {
     AlarmState.UNACKNOWLEDGED: "NEW",
     AlarmState.ACKNOWLEDGED: "acknowledged",
     AlarmState.RETURNED_UNACKNOWLEDGED: "over, not acknowledged",
+    AlarmState.LATCHED_UNACKNOWLEDGED: "over, latched, not acknowledged",
+    AlarmState.LATCHED_ACKNOWLEDGED: "over, latched until reset",
     AlarmState.NORMAL: "normal",
 }
+
+ASKED_STATES = {
+    "ack": (
+        AlarmState.UNACKNOWLEDGED,
+        AlarmState.RETURNED_UNACKNOWLEDGED,
+        AlarmState.LATCHED_UNACKNOWLEDGED,
+    ),
+    "reset": (AlarmState.LATCHED_ACKNOWLEDGED,),
+}
+ACT_WORDS = {"ack": "acknowledges", "reset": "resets"}
+TAKEN_UP = "a running daemon takes it up within seconds, else the next start does"
 
 
 def alarms(arguments: Namespace) -> int:
     """List the alarms, or write down an acknowledgement."""
     words = list(arguments.words)
-    if words and words[0] == "ack":
-        return _acknowledge(arguments, words[1:])
+    if words and words[0] in ASKED_STATES:
+        return _act(arguments, words[0], words[1:])
     with _record(arguments, words) as (store, plate):
         rows = store.alarm_list(plate or None, open_only=not arguments.all)
     if arguments.json:
@@ -73,14 +86,16 @@ class _Opened:
         self._store.close()
 
 
-def _acknowledge(arguments: Namespace, words: list[str]) -> int:
+def _act(arguments: Namespace, verb: str, words: list[str]) -> int:
+    """Write down an acknowledgement or a reset for the daemon to take up."""
+    what = ACT_WORDS[verb]
     if len(words) < 2:
         raise SettingsError(
-            "name the alarm and its subject: platewatch alarms ack peak-coming product "
+            f"name the alarm and its subject: platewatch alarms {verb} peak-coming product "
             '--person "early shift" --db FILE'
         )
     if not arguments.person.strip():
-        raise SettingsError("say who acknowledges: --person NAME")
+        raise SettingsError(f"say who {what}: --person NAME")
     alarm, subject, *rest = words
     with _record(arguments, rest, read_only=False) as (store, plate):
         known = store.alarm_list(plate or None, open_only=False)
@@ -91,22 +106,32 @@ def _acknowledge(arguments: Namespace, words: list[str]) -> int:
             plates = ", ".join(row.plate for row in meant)
             raise SettingsError(f"several plates have this alarm ({plates}); say --plate NAME")
         state = meant[0].event.to_state
-        if state not in (AlarmState.UNACKNOWLEDGED, AlarmState.RETURNED_UNACKNOWLEDGED):
-            print(f"{alarm} {subject} needs no acknowledgement: {STATE_WORDS.get(state, state)}")
+        if state not in ASKED_STATES[verb]:
+            print(f"nothing to do for {alarm} {subject}: {STATE_WORDS.get(state, state)}")
             return 0
-        store.act(
-            meant[0].plate,
-            SystemClock().utc_us(),
-            arguments.person.strip(),
-            "ack",
-            alarm,
-            subject,
-            arguments.reason,
-        )
-    print(
-        f"written down: {arguments.person} acknowledges {alarm} {subject}; "
-        "a running daemon takes it up within seconds, else the next start does"
-    )
+        person = arguments.person.strip()
+        at_us = SystemClock().utc_us()
+        store.act(meant[0].plate, at_us, person, verb, alarm, subject, arguments.reason)
+    print(f"written down: {person} {what} {alarm} {subject}; {TAKEN_UP}")
+    return 0
+
+
+def answer(arguments: Namespace) -> int:
+    """Write down an answer to the open question: evidence for the daemon, not a verdict."""
+    if not arguments.person.strip():
+        raise SettingsError("say who answers: --person NAME")
+    with _record(
+        arguments, [arguments.plate_file] if arguments.plate_file else [], read_only=False
+    ) as (
+        store,
+        plate,
+    ):
+        plates = [plate] if plate else store.plates()
+        if len(plates) != 1:
+            raise SettingsError(f"the record holds {', '.join(plates)}; say --plate NAME")
+        person, at_us = arguments.person.strip(), SystemClock().utc_us()
+        store.act(plates[0], at_us, person, "answer", "", arguments.said, arguments.reason)
+    print(f"written down: {person} answers {arguments.said}; {TAKEN_UP}")
     return 0
 
 

@@ -27,6 +27,8 @@ from platewatch.monitor.peak import Hottest, Places, hottest_now, probability_ov
 from platewatch.types import Array, Gaussian
 
 CREDIBLE = 0.01  # the alarm floor
+COLDER_K = 40.0  # a load from the cold store, hardly more
+HOTTEST_DEGC = 1400.0
 Times = tuple[float | None, float | None, float | None]
 
 
@@ -96,16 +98,27 @@ def look_ahead(
     missed (cells,): K to add to the field whatever the cause
     """
     prospects = [
-        _prospect(means, replace_belief(field, v), start, v, v.probability, missed) for v in views
+        _prospect(means, replace_belief(field, v), start, v, v.probability, missed)
+        for v in views
+        if is_possible(means.quiet, field, v)
     ]
     if p_none >= CREDIBLE or not prospects:
-        prospects.append(_prospect(means, field, start, None, p_none, missed))
+        rest = p_none if prospects else 1.0
+        prospects.append(_prospect(means, field, start, None, rest, missed))
     prospects.sort(key=lambda p: -p.probability)
     regions = {
         r: mixed([(p.probability, p.ahead[r]) for p in prospects]) for r in means.where.regions
     }
     passing = {limit.name: _passing_of_all(prospects, limit.name) for limit in means.limits}
     return Ahead(field.at_us, regions, passing, tuple(prospects))
+
+
+def is_possible(quiet: Quiet, field: FieldState, view: View) -> bool:
+    """Can a plate be like that?  Nothing on it is far colder than its surroundings, and
+    nothing is so hot that no table of losses reaches there."""
+    T = quiet.reduced.V @ view.belief.mean[quiet.blocks.a] + view.missed
+    coldest = float(field.around.min(initial=0.0)) - COLDER_K
+    return bool(coldest <= T.min() and T.max() <= HOTTEST_DEGC)
 
 
 def replace_belief(field: FieldState, view: View) -> FieldState:
