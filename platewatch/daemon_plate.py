@@ -15,7 +15,7 @@ from platewatch.clock import Clock
 from platewatch.daemon_record import PlateRecord
 from platewatch.daemon_writer import Writer
 from platewatch.errors import StorageError
-from platewatch.session import Keeping, record_event
+from platewatch.session import RecordState, record_event
 from platewatch.types import Action, AlarmState, Gap, LimitRow, Outcome, PeakRow, Reading, Refused
 
 COMMIT_EVERY_S = 1.0
@@ -82,7 +82,7 @@ class PlateRun:
         self._passing: dict[str, LimitRow] = {}
         self._standing = {(e.alarm, e.subject): e for e in store.alarm_states(self.plate)}
         self._unannounced: deque[tuple[float, Outcome]] = deque()
-        self._keeping = Keeping.WELL
+        self._kept = RecordState()
         self._gap: Gap | None = None
         self._polling: Future[list[Action]] | None = None
         now_s = clock.monotonic()
@@ -347,8 +347,8 @@ class PlateRun:
             tokens += self.record.release(self._clock.utc_us())
         self._bus.acknowledge(tokens)
         state = self.record.state(now_s)
-        if state.keeping is not self._keeping:
-            self._keeping = state.keeping
+        if state.says_other_than(self._kept):
+            self._kept = state
             self.record.waiting.events.append(self.session.take_event(record_event(state)))
 
     def _watch_bus(self, now_s: float) -> None:

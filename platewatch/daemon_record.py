@@ -107,12 +107,18 @@ class PlateRecord:
         room = self.writer.room
         free = None if room.free_MB is None else round(room.free_MB, 1)
         days = None if room.days_left is None else round(room.days_left, 2)
-        keeping = Keeping.LITTLE_ROOM if room.is_little else Keeping.WELL
+        keeping = Keeping.WELL
         if self._held_since_us is not None:
             keeping = Keeping.LOSING
-        elif self._trouble_s is not None and now_s - self._trouble_s >= FAILING_AFTER_S:
+        elif self._has_failed_for_long(now_s):
             keeping = Keeping.FAILING
-        return RecordState(keeping, free, days, self._why if self.in_trouble else "")
+        why = self._why if self.in_trouble else ""
+        return RecordState(keeping, room.is_little, free, days, why)
+
+    def _has_failed_for_long(self, now_s: float) -> bool:
+        if self._trouble_s is None:
+            return False
+        return self.writer.is_full or now_s - self._trouble_s >= FAILING_AFTER_S
 
     def turn(self, now_s: float, *, due: bool) -> Settled:
         """Take the result of the last commit; begin the next one if it is due."""
@@ -172,11 +178,13 @@ class PlateRecord:
         """In the writing thread.  Empty when all is stored, else why the readings are not."""
         store, rest = self.writer.store, list(batch.refused.values())
         try:
+            if self.writer.is_full and not self.writer.has_room_again():
+                raise compose.DiskFullError(self._why)
             store.write(
                 self._plate, batch.outcomes, batch.readings, self._units, batch.events, rest
             )
         except compose.DiskFullError as error:
-            store.give_reserve()
+            self.writer.full()
             if not batch.outcomes and not batch.events:
                 raise
             store.write(self._plate, batch.outcomes, [], self._units, batch.events)
@@ -214,7 +222,6 @@ class PlateRecord:
             return
         self._trouble_s, self._retry_s, self._hold_s = None, float("-inf"), float("-inf")
         self._log.info("the record is being written again")
-        self.writer.submit(self.writer.store.keep_reserve)
         if self._held_since_us is None:
             return
         text = (

@@ -59,6 +59,7 @@ class Writer:
         self._started_s = self._looked_s = clock.monotonic()
         self._upkeep_s = self._started_s + UPKEEP_FIRST_S
         self._upkeep: threading.Thread | None = None
+        self.is_full = False  # and the reserve given up, which only alarms and peaks may use
         store.keep_reserve()
         sizes = store.sizes()
         self._began_with = sizes.database + sizes.wal
@@ -94,6 +95,16 @@ class Writer:
             self._upkeep.start()
         elif self._upkeep is not None and not self._upkeep.is_alive():
             self._upkeep, self._upkeep_s = None, now_s + UPKEEP_EVERY_S
+
+    def full(self) -> None:
+        """The disk is full: the reserve is for what matters most."""
+        self.is_full = True
+        self.store.give_reserve()
+
+    def has_room_again(self) -> bool:
+        """Could the reserve be made again?"""
+        self.is_full = not self.store.keep_reserve()
+        return not self.is_full
 
     def close(self) -> None:
         """After what is under way; the daily upkeep is left where it is, it goes on tomorrow."""

@@ -137,7 +137,7 @@ class Session:
             if event.event == RECORD_EVENT:
                 self._record = record_state(event)
         standing = any(alarm == ALARM for alarm, _ in self._state.alarms)
-        if self._record.keeping is Keeping.WELL and not standing:
+        if self._record.is_well and not standing:
             return outcome
         found = store_failing(self._record)
         alarms, raised = apply_conditions(dict(self._state.alarms), found, tick)

@@ -234,8 +234,7 @@ class Bus:
 
     def _close_socket(self) -> None:
         """paho leaves it open when its thread ended before it had said goodbye."""
-        left = self._client.socket()
-        if left is not None:
+        if (left := self._client.socket()) is not None:
             left.close()
 
     def _build(self) -> _Client:

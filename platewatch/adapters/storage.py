@@ -255,13 +255,13 @@ class Store(Record):
         """Room used and left; all zero for a record in memory."""
         return sizes_of(self._path)
 
-    def keep_reserve(self) -> None:
-        """Hold room back for alarms and peaks, if it can be had; see `storage_room`."""
-        keep_reserve(self._path)
+    def keep_reserve(self) -> bool:
+        """Hold room back for alarms and peaks; is it held now?  See `storage_room`."""
+        return keep_reserve(self._path)
 
-    def give_reserve(self) -> bool:
-        """Give that room to the record; False where there is none any more."""
-        return give_reserve(self._path)
+    def give_reserve(self) -> None:
+        """Give that room to the record."""
+        give_reserve(self._path)
 
     def signs(self, plate: str, now_us: int) -> Signs:
         """What tells whether a daemon keeps this record as it should."""

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 RESERVE_BYTES = 16 * 2**20  # peaks and alarms of one plate for about two days
-RESERVE_PART = 16  # at most this part of what is free, on a very small disk
+RESERVE_PART = 16  # at most this part of the disk, where it is a very small one
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,25 +35,30 @@ def sizes_of(path: Path | None) -> Sizes:
     return Sizes(_size(path), _size(wal), free)
 
 
-def keep_reserve(path: Path | None) -> None:
-    """Make the reserve if it is missing and can be had without using up the disk."""
-    if path is None or _size(_reserve(path)):
-        return
-    room = min(RESERVE_BYTES, sizes_of(path).free // RESERVE_PART)
+def keep_reserve(path: Path | None) -> bool:
+    """Make the reserve if it is missing and as much again stays free; is it there now?"""
+    if path is None:
+        return True
+    disk = shutil.disk_usage(path.resolve().parent)
+    size = min(RESERVE_BYTES, disk.total // RESERVE_PART)
+    if _size(_reserve(path)) >= size:
+        return True
+    if disk.free < 2 * size:
+        return False
     try:
         with open(_reserve(path), "wb") as file:
-            os.posix_fallocate(file.fileno(), 0, room)
-    except (OSError, ValueError):
+            os.posix_fallocate(file.fileno(), 0, size)
+    except OSError:
         give_reserve(path)
-
-
-def give_reserve(path: Path | None) -> bool:
-    """Free the reserve; False where there was none."""
-    if path is None or not _size(_reserve(path)):
         return False
-    with contextlib.suppress(OSError):
-        _reserve(path).unlink()
     return True
+
+
+def give_reserve(path: Path | None) -> None:
+    """Free the reserve, if there is one."""
+    if path is not None:
+        with contextlib.suppress(OSError):
+            _reserve(path).unlink()
 
 
 def _reserve(path: Path) -> Path:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import atexit
 import json
+import signal
 import sqlite3
 import subprocess
 import sys
@@ -84,16 +86,20 @@ def assert_same(live: list[tuple[object, ...]], again: list[tuple[object, ...]])
 class Daemon:
     """`platewatch run` as a process of its own, its log in a file."""
 
-    def __init__(self, port: int, record: Path, *more: str) -> None:
-        self.log_path = record.with_suffix(f".{time.monotonic_ns()}.log")
+    def __init__(
+        self, port: int, record: Path, *more: str, plate: Path = PLATE, logs: Path | None = None
+    ) -> None:
+        name = f"{record.stem}.{time.monotonic_ns()}.log"
+        self.log_path = (logs or record.parent) / name
         with self.log_path.open("w") as log:
             self._process = subprocess.Popen(
                 [
-                    *(sys.executable, "-m", "platewatch", "run", str(PLATE), *more),
+                    *(sys.executable, "-m", "platewatch", "run", str(plate), *more),
                     *("--broker", f"127.0.0.1:{port}", "--db", str(record)),
                 ],
                 stderr=log,
             )
+        atexit.register(self._process.kill)  # where a test fails before it ends
 
     @property
     def log(self) -> str:
@@ -107,8 +113,15 @@ class Daemon:
         return self._process.wait(20)
 
     def kill(self) -> None:
-        self._process.kill()
+        self.signal(signal.SIGKILL)
         self._process.wait(20)
+
+    def signal(self, number: int) -> None:
+        self._process.send_signal(number)
+
+    @property
+    def running(self) -> bool:
+        return self._process.poll() is None
 
 
 class Gateway:
