@@ -23,6 +23,7 @@ MODULES = {
     "verify": "platewatch.cli_record",
     "backup": "platewatch.cli_record",
     "tidy": "platewatch.cli_record",
+    "health": "platewatch.cli_health",
 }
 INTERRUPTED = 130
 

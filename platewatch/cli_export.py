@@ -35,7 +35,8 @@ def readings(store: compose.Store, wish: Wish) -> int:
     """The readings that were used and the batch events, as the wide log that `replay` reads."""
     used = _some(_used(store, wish), wish)
     channels = sorted(store.units(wish.plate))
-    events = list(store.events(wish.plate, wish.from_us, wish.to_us))
+    # What platewatch noted about its own record ("record") is no matter of the plant's log.
+    events = [e for e in store.events(wish.plate, wish.from_us, wish.to_us) if e.event != "record"]
     if wish.out.suffix == ".csv":
         return compose.write_wide_log(wish.out, used, channels=channels, events=events)
     names = ["at_us", *channels, *(["batch"] if events else [])]

@@ -53,6 +53,7 @@ def build_parser() -> Parser:
         _verify,
         _backup,
         _tidy,
+        _health,
     ):
         add(commands)
     return parser
@@ -80,6 +81,7 @@ COMMANDS = (
     "verify",
     "backup",
     "tidy",
+    "health",
 )
 
 
@@ -300,4 +302,21 @@ def _tidy(commands: Commands) -> None:
     parser.add_argument("--db", metavar="FILE", required=True)
     parser.add_argument("--keep-readings-days", type=float, default=90.0)
     parser.add_argument("--keep-days", type=float, default=400.0)
+    _json(parser)
+
+
+def _health(commands: Commands) -> None:
+    parser = _command(
+        commands,
+        "health",
+        "is the record being kept as it should: age of the picture, blindness, store, clocks; "
+        "ends with 1 and the reasons if not",
+        "health --db table-1.sqlite",
+    )
+    parser.add_argument("plate_file", metavar="PLATE.toml", nargs="?", default="")
+    parser.add_argument("--db", metavar="FILE", default="", help="instead of PLATE.toml")
+    parser.add_argument("--plate", metavar="NAME", default="", help="only this one of a record")
+    parser.add_argument(
+        "--max-age", type=float, default=30.0, metavar="S", help="of the last picture (default 30)"
+    )
     _json(parser)
