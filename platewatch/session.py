@@ -54,6 +54,8 @@ class Session:
     ) -> None:
         options = monitor.estimator
         self._monitor = monitor
+        if monitor.causes is not None:
+            monitor.causes.prepare()
         self._ticker = Ticker(options.tick_us, options.late_us, closed_us=closed_us)
         fresh = shot is None and not alarms
         self._state: State = first(monitor) if fresh else resume(monitor, shot, alarms or {})

@@ -53,6 +53,12 @@ class Model:
             self._built[sensors] = (sentinel, bank)
         return self._built[sensors]
 
+    def prepare(self) -> None:
+        """Build what the first tick with all thermocouples would wait for."""
+        everyone = tuple(range(len(self.quiet.plate.sensors)))
+        self.of(everyone)
+        self.groups(everyone)
+
     def groups(self, sensors: tuple[int, ...]) -> Groups:
         """Hypotheses by cause and subject, with their priors."""
         if sensors not in self._groups:
