@@ -92,19 +92,21 @@ def look_ahead(
     views: Sequence[View],
     p_none: float,
     missed: Array | None = None,
+    error: Array | None = None,
 ) -> Ahead:
     """Every credible prospect, and their average.
 
     missed (cells,): K to add to the field whatever the cause
+    error (ns,): K by which thermocouples that nobody believes read off; loops follow them
     """
     prospects = [
-        _prospect(means, replace_belief(field, v), start, v, v.probability, missed)
+        _prospect(means, replace_belief(field, v), start, v, v.probability, missed, error)
         for v in views
         if is_possible(means.quiet, field, v)
     ]
     if p_none >= CREDIBLE or not prospects:
         rest = p_none if prospects else 1.0
-        prospects.append(_prospect(means, field, start, None, rest, missed))
+        prospects.append(_prospect(means, field, start, None, rest, missed, error))
     prospects.sort(key=lambda p: -p.probability)
     regions = {
         r: mixed([(p.probability, p.ahead[r]) for p in prospects]) for r in means.where.regions
@@ -133,6 +135,7 @@ def _prospect(
     view: View | None,
     probability: float,
     missed: Array | None,
+    error: Array | None,
 ) -> Prospect:
     quiet, where = means.quiet, means.where
     if view is not None:
@@ -140,6 +143,8 @@ def _prospect(
     X = state_draws(field, means.draws)
     if view is not None:
         X[quiet.blocks.beta] += view.reading_error[:, None]
+    if error is not None:
+        X[quiet.blocks.beta] += error[:, None]
     heat = None if view is None else view.heat_ahead
     path = carry(quiet, field, means.loops, start, X, means.options, heat)
     regions = {r: hottest_ahead(quiet, where, path, r, missed) for r in where.regions}

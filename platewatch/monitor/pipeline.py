@@ -8,11 +8,13 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import replace
 
+import numpy as np
+
 from platewatch.monitor import conditions as ask
 from platewatch.monitor import verdicts
 from platewatch.monitor.alarms import Condition
 from platewatch.monitor.annunciate import apply_actions, apply_conditions
-from platewatch.monitor.causes import layer
+from platewatch.monitor.causes import layer, plain
 from platewatch.monitor.causes.settled import left_out, missed_now, without
 from platewatch.monitor.causes.views import View
 from platewatch.monitor.conditions import Estimate
@@ -51,6 +53,7 @@ ZONE_POWER_EVERY_US = 10_000_000
 SHOT_EVERY_US = 60_000_000
 SETTLED_SD_K = 3.0  # the present peak is known this well once the filter has found its feet
 SETTLED_AFTER_US = 600_000_000
+YOUNG_US = 600_000_000  # a plate watched for less is begun anew without a lying thermocouple
 NEAR_LIMIT_K = 20.0
 CAUSES_EVERY_US = 10_000_000
 
@@ -69,15 +72,16 @@ def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
         return replace(state, alarms=alarms), Outcome(
             tick.at_us, alarm_events=events, applied=tuple(a.seq for a in tick.actions)
         )
-    before = state.picture
+    before, everyone = state.picture, seen
     if state.causes is not None:
         assert monitor.causes is not None
-        everyone = seen
         seen = without(seen, left_out(state.causes.settled, monitor.quiet))
         if before is not None:
-            causes = layer.review_settled(monitor.causes, state.causes, before, everyone)
+            showing = _showing(monitor, state)
+            causes = layer.review_settled(monitor.causes, state.causes, before, everyone, showing)
             state = replace(state, causes=causes)
     state, gaps = _see(monitor, state, tick, seen)
+    state = _plain(monitor, state, before, tick, everyone)
     state = _attend(monitor, state, before, tick, seen)
     assert state.picture is not None
     fresh = present(monitor.means, state.picture.belief, _missed(state))
@@ -177,6 +181,43 @@ def _attend(
     return replace(state, causes=layer.attend(model, causes, before, dt_us, seen))
 
 
+def _plain(
+    monitor: Monitor, state: State, before: FieldState | None, tick: Tick, everyone: Observed
+) -> State:
+    """Leave out thermocouples that show by themselves that they are at fault."""
+    model = monitor.causes
+    if model is None or tick.backlog:
+        return state
+    known = state.plain or plain.begin(monitor.quiet)
+    junctions, off = state.heard.junctions, model.options.off
+    now = plain.watch(monitor.quiet, known, tick.at_us, everyone, before, junctions, off)
+    state = replace(state, plain=now)
+    if not now.found or state.picture is None:
+        return state
+    causes = state.causes or layer.State(tuple(range(len(monitor.quiet.plate.sensors))))
+    young = tick.at_us - state.started_us < YOUNG_US
+    causes, picture = layer.leave_out_plain(model, causes, state.picture, everyone, now, young)
+    return replace(state, causes=causes, picture=picture)
+
+
+def _showing(monitor: Monitor, state: State) -> frozenset[str]:
+    """Thermocouples whose reading still shows a fault by itself."""
+    found = () if state.plain is None else state.plain.found
+    return frozenset(monitor.quiet.plate.sensors[i].name for i in found)
+
+
+def _reading_error(monitor: Monitor, state: State) -> Array | None:
+    """(ns,) K by which left-out thermocouples read off: the loops still follow them."""
+    if state.causes is None or state.picture is None:
+        return None
+    ignored = left_out(state.causes.settled, monitor.quiet)
+    if not ignored:
+        return None
+    error = state.heard.degC - monitor.quiet.H @ state.picture.belief.mean
+    mine = np.isin(np.arange(error.size), list(ignored)) & np.isfinite(error)
+    return np.where(mine, error, 0.0)
+
+
 def _look(monitor: Monitor, state: State) -> State:
     """Explain what does not fit, and carry every credible explanation over the horizon."""
     assert state.picture is not None
@@ -190,7 +231,8 @@ def _look(monitor: Monitor, state: State) -> State:
     assert state.picture is not None
     start = loop_start(monitor.loops, monitor.recipes, times, state.heard, state.integral)
     missed = _missed(state)
-    ahead = look_ahead(monitor.means, state.picture, start, views, p_none, missed)
+    error = _reading_error(monitor, state)
+    ahead = look_ahead(monitor.means, state.picture, start, views, p_none, missed, error)
     question = verdicts.question(monitor.words, ahead.prospects)
     return replace(state, causes=causes, ahead=ahead, question=question)
 

@@ -58,6 +58,10 @@ def _part(words: Words, prospect: Prospect, cause: Cause, subject: str) -> str:
             return f"unknown heat on zone {subject} near {place}, {watts}"
         case Cause.LOSS_CHANGED:
             return f"the plate loses {'less' if view.watts > 0 else 'more'} heat ({subject})"
+        case Cause.SENSOR_STUCK:
+            return f"the reading of {subject} stands still"
+        case Cause.SENSOR_REVERSED:
+            return f"{subject} falls where the plate warms (wires reversed)"
         case Cause.JUNCTION_BLOCK:
             return f"all thermocouples of block {subject} are shifted"
         case _:

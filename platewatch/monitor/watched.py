@@ -8,6 +8,7 @@ from dataclasses import dataclass, field, replace
 from platewatch.monitor import conditions as ask
 from platewatch.monitor.alarms import Alarm
 from platewatch.monitor.causes import layer
+from platewatch.monitor.causes.plain import Plain
 from platewatch.monitor.conditions import Words
 from platewatch.monitor.estimator import FieldState, Quiet
 from platewatch.monitor.inputs import Heard, nothing_heard
@@ -77,6 +78,7 @@ class State:
     causes: layer.State | None = None
     causes_us: int = 0
     question: str = ""
+    plain: Plain | None = None
 
 
 def first(monitor: Monitor) -> State:

@@ -22,11 +22,19 @@ from platewatch.monitor.causes.evidence import (
     observe,
     strongest,
 )
+from platewatch.monitor.causes.plain import Plain, verdict
 from platewatch.monitor.causes.refine import (
     Fit,
 )
 from platewatch.monitor.causes.second_look import apart, second_look
-from platewatch.monitor.causes.settled import adopt, left_out, review
+from platewatch.monitor.causes.settled import (
+    adopt,
+    left_out,
+    left_out_but,
+    mean_square_mode,
+    review,
+    without,
+)
 from platewatch.monitor.causes.views import View, build_views
 from platewatch.monitor.causes.weighing import (
     RELIABILITY,
@@ -35,11 +43,18 @@ from platewatch.monitor.causes.weighing import (
     says_load,
     weigh,
 )
-from platewatch.monitor.estimator import FieldState, Observed, Quiet, sensitivities
-from platewatch.types import Array, Tick
+from platewatch.monitor.estimator import (
+    FieldState,
+    Observed,
+    Quiet,
+    first_state,
+    sensitivities,
+)
+from platewatch.types import Array, Gaussian, Tick
 
 WARM_UP_US = 120_000_000  # the quiet filter finds its feet before the bank listens
 AFTERWARDS_US = 300_000_000  # the filter takes in a settled cause before the bank listens again
+UNLISTENED_US = 60_000_000  # and a thermocouple that is left out, if it lied by itself
 SUSPECT_LOG_ODDS = -2.0  # below this nothing is looked at twice
 STRIKING = 9.0  # nats of the best single hypothesis, below which none is looked at
 CREDIBLE = 0.01  # the alarm floor: causes above it count
@@ -181,11 +196,70 @@ def settle(model: Model, state: State, field_state: FieldState) -> tuple[State, 
     return State(sensors, settled=all_settled, idle_until_us=until_us), moved
 
 
-def review_settled(model: Model, state: State, field_state: FieldState, seen: Observed) -> State:
-    """Drop settled causes that are over; a thermocouple that returns is listened to again."""
+def leave_out_plain(
+    model: Model, state: State, field_state: FieldState, seen: Observed, plain: Plain, young: bool
+) -> tuple[State, FieldState]:
+    """Leave out thermocouples whose reading shows its fault by itself.
+
+    The field is made from the others: from before the fault where that is remembered,
+    from their readings alone where the plate has hardly been watched (young).
+    """
+    known = {s.sensor for s in state.settled}
+    names = [s.name for s in model.quiet.plate.sensors]
+    new = [i for i in plain.found if names[i] not in known]
+    if not new or len(known) + len(new) >= len(names):
+        return state, field_state
+    since = {i: int(plain.still.since_us[i]) for i in new}
+    verdicts = [verdict(model.quiet, field_state, plain.found[i], i, since[i]) for i in new]
+    settled = (*state.settled, *verdicts)
+    ignored = left_out(settled, model.quiet)
+    sensors = tuple(i for i in range(len(names)) if i not in ignored)
+    moved = _by_the_others(model, state, field_state, seen, sensors, new[0], young)
+    until_us = field_state.at_us + UNLISTENED_US
+    return State(sensors, answer=state.answer, settled=settled, idle_until_us=until_us), moved
+
+
+def _by_the_others(
+    model: Model,
+    state: State,
+    field: FieldState,
+    seen: Observed,
+    sensors: tuple[int, ...],
+    liar: int,
+    young: bool,
+) -> FieldState:
+    """The field without what a lying thermocouple has done to it."""
+    quiet, k = model.quiet, model.quiet.blocks
+    if young:
+        return first_state(quiet, field.at_us, without(seen, left_out_but(quiet, sensors)))
+    cov = field.belief.cov.copy()
+    cov[k.a, k.a] += mean_square_mode(quiet) * np.eye(k.modes)
+    mean = field.belief.mean
+    if state.past and liar in state.sensors and set(sensors) <= set(state.sensors):
+        sentinel, _ = model.of(sensors)
+        deaf = listen_without(quiet, sentinel, state.past, state.sensors, liar, len(state.past))
+        n = len(sentinel.F)
+        mean = np.concatenate((deaf.mean, mean[k.theta]))
+        cov = np.zeros_like(cov)
+        cov[:n, :n] = sentinel.cov
+        cov[k.theta, k.theta] = field.belief.cov[k.theta, k.theta]
+    return replace(field, belief=Gaussian(mean, cov), misfit=1.0)
+
+
+def review_settled(
+    model: Model,
+    state: State,
+    field_state: FieldState,
+    seen: Observed,
+    showing: frozenset[str] = frozenset(),
+) -> State:
+    """Drop settled causes that are over; a thermocouple that returns is listened to again.
+
+    showing: thermocouples whose reading shows its fault by itself
+    """
     if not state.settled:
         return state
-    kept = review(state.settled, model.quiet, field_state, seen)
+    kept = review(state.settled, model.quiet, field_state, seen, showing)
     ignored = left_out(kept, model.quiet)
     sensors = tuple(i for i in range(len(model.quiet.plate.sensors)) if i not in ignored)
     if sensors != state.sensors:

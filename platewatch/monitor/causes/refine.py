@@ -86,6 +86,8 @@ FAMILY_OF = {
     Cause.SENSOR_STEP: Family.SENSOR,
     Cause.SENSOR_DRIFT: Family.SENSOR,
     Cause.SENSOR_LOOSE: Family.SENSOR,
+    Cause.SENSOR_STUCK: Family.SENSOR,
+    Cause.SENSOR_REVERSED: Family.SENSOR,
     Cause.JUNCTION_BLOCK: Family.BLOCK,
 }
 

@@ -87,6 +87,11 @@ def left_out(settled: Sequence[Settled], quiet: Quiet) -> frozenset[int]:
     return frozenset(names.index(s.sensor) for s in settled if s.sensor is not None)
 
 
+def left_out_but(quiet: Quiet, sensors: Sequence[int]) -> frozenset[int]:
+    """All thermocouples but these."""
+    return frozenset(range(len(quiet.plate.sensors))) - frozenset(sensors)
+
+
 def without(seen: Observed, ignored: frozenset[int]) -> Observed:
     """The readings without those of the left-out thermocouples."""
     if not ignored:
@@ -102,11 +107,21 @@ def without(seen: Observed, ignored: frozenset[int]) -> Observed:
 
 
 def review(
-    settled: Sequence[Settled], quiet: Quiet, field: FieldState, seen: Observed
+    settled: Sequence[Settled],
+    quiet: Quiet,
+    field: FieldState,
+    seen: Observed,
+    showing: frozenset[str] = frozenset(),
 ) -> tuple[Settled, ...]:
-    """Those that still hold: a repaired thermocouple returns, a repaired heater is over."""
+    """Those that still hold: a repaired thermocouple returns, a repaired heater is over.
+
+    showing: thermocouples whose reading shows its fault by itself; they do not return
+    """
     kept = []
     for each in settled:
+        if each.sensor is not None and each.sensor in showing:
+            kept.append(replace(each, agrees_us=0))
+            continue
         reviewed = _review(each, quiet, field, seen)
         if reviewed is not None:
             kept.append(reviewed)

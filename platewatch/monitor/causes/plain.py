@@ -1,0 +1,96 @@
+"""Faults that a reading shows by itself: it stands still, or it is a mirror image.
+
+No field and no other cause is needed to tell them, so they are watched from the first
+reading on, also before the bank listens.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from platewatch.monitor.causes.catalogue import Cause
+from platewatch.monitor.causes.frozen import Still, frozen, listen, nothing_still
+from platewatch.monitor.causes.mirrored import Mirrors, look, mirrored, no_mirrors
+from platewatch.monitor.causes.settled import Settled
+from platewatch.monitor.causes.views import View
+from platewatch.monitor.estimator import FieldState, Observed, Quiet
+from platewatch.types import Array
+
+PLAIN = (Cause.SENSOR_STUCK, Cause.SENSOR_REVERSED)
+PROBABILITY = 0.99  # of a finding that needs no model
+SHORTEST_US = 60_000_000  # a plate watched for less has no field worth keeping
+
+
+@dataclass(frozen=True)
+class Plain:
+    """still, mirrors: what each test carries along;  found: cause by thermocouple"""
+
+    still: Still
+    mirrors: Mirrors
+    found: Mapping[int, Cause]
+
+
+def begin(quiet: Quiet) -> Plain:
+    """Before the first reading."""
+    return Plain(nothing_still(quiet), no_mirrors(quiet), {})
+
+
+def watch(
+    quiet: Quiet,
+    plain: Plain,
+    at_us: int,
+    seen: Observed,
+    field: FieldState | None,
+    junctions: Mapping[str, float],
+    off: Sequence[str] = (),
+) -> Plain:
+    """One tick.  seen: all readings;  field: as known before it;  off: causes not looked for."""
+    ns = len(quiet.plate.sensors)
+    degC = np.full(ns, np.nan)
+    degC[list(seen.sensors)] = seen.degC
+    expected = np.full(ns, np.nan) if field is None else _expected(quiet, field)
+    still = listen(quiet, plain.still, at_us, degC, expected)
+    mirrors = look(
+        quiet, plain.mirrors, at_us, degC, seen.around, junctions, frozenset(plain.found)
+    )
+    found: dict[int, Cause] = {}
+    for causes, numbers in (
+        (Cause.SENSOR_STUCK, frozen(quiet, still, at_us, expected)),
+        (Cause.SENSOR_REVERSED, mirrored(mirrors, at_us)),
+    ):
+        if causes.value not in off:
+            found |= dict.fromkeys(sorted(numbers), causes)
+    return Plain(still, mirrors, found)
+
+
+def _expected(quiet: Quiet, field: FieldState) -> Array:
+    """(ns,) what the field gives at the junctions."""
+    k = quiet.blocks
+    return np.asarray(quiet.steps.system.sensors @ field.belief.mean[k.a])
+
+
+def verdict(quiet: Quiet, field: FieldState, cause: Cause, sensor: int, since_us: int) -> Settled:
+    """A plain fault as a settled cause: its thermocouple is left out from now on."""
+    place = quiet.plate.sensors[sensor]
+    error = np.zeros(len(quiet.plate.sensors))
+    view = View(
+        parts=((cause, place.name),),
+        probability=PROBABILITY,
+        belief=field.belief,
+        missed=np.zeros(quiet.grid.n),
+        heat_ahead=np.zeros((0, quiet.blocks.modes)),
+        reading_error=error,
+        watts=0.0,
+        onset_us=since_us,
+        x_m=place.x_m,
+        y_m=place.y_m,
+        lasting=np.zeros(quiet.blocks.modes),
+        lasting_share=0.0,
+    )
+    return Settled(view, field.at_us)
+
+
+__all__ = ["PLAIN", "Plain", "begin", "verdict", "watch"]
