@@ -1,9 +1,7 @@
 """The plant's MQTT broker (paho-mqtt): messages in without loss, our own root out.
 
 What makes it lose nothing at QoS 1: a stable client name with a persistent session,
-and an acknowledgement that the daemon gives only after its commit.  Until then the
-broker keeps the message and sends it again after a break.
-
+and an acknowledgement only after the commit.  Until then the broker keeps the message.
 The broker limits how many messages may wait for that (mosquitto: max_inflight_messages,
 20 unless raised).  Commit when the queue runs empty.
 """
@@ -34,6 +32,7 @@ __all__ = ["Arrival", "Bus", "BusEvent", "Token"]
 ALIVE_EVERY_S = 5.0
 SHORT_CONNECTION_S = 10.0  # ended sooner, it may be another client of our name
 SHORT_IN_A_ROW = 3
+UNSPECIFIED = 0x80  # what paho gives where the line simply broke
 SILENT_AFTER_S = 60.0  # connected, and nothing comes: told once
 RENEW_AFTER_S = 300.0  # then the connection is made anew, at twice the interval each time
 
@@ -329,7 +328,8 @@ class Bus:
             was_connected = self._connected
             self._lost()
             if was_connected and not self._stopping and not self._renewing:
-                self._tell("lost", f"{self.host}:{self.port}: {reason}; trying again")
+                why = "connection broken" if reason.value == UNSPECIFIED else str(reason)
+                self._tell("lost", f"{self.host}:{self.port}: {why}; trying again")
                 self._count_short(self._clock.monotonic() - self._connected_at)
         except Exception as error:
             self._tell("callback failed", f"on losing the broker: {error!r}")
