@@ -166,3 +166,39 @@ def test_a_connection_that_brings_nothing_is_told_once_and_made_anew(
         assert wait_for(lambda: bus.turned_s() < 2.0)
     finally:
         bus.stop()
+
+
+@pytest.mark.broker
+@needs_mosquitto
+def test_the_recommended_rights_let_platewatch_write_below_its_own_root_only(
+    tmp_path: Path,
+) -> None:
+    """Job, M14: the default rights cannot publish a duty or a set-point."""
+    rights = Path(__file__).resolve().parents[2] / "config" / "mosquitto-platewatch.acl"
+    broker = Mosquitto(tmp_path, f"acl_file {rights}\n").start()
+    sink: queue.Queue[Arrival] = queue.Queue(9)
+    bus = Bus(
+        "table-1",
+        ["plates/table-1/#"],
+        sink,
+        SystemClock(),
+        port=broker.port,
+        user="platewatch",
+        publish=True,
+    )
+    bus.start()
+    try:
+        assert wait_for(lambda: bus.connected)
+        time.sleep(0.3)
+        duty = "plates/table-1/zone/Z1/duty"
+        broker.publish(duty, "0.9", "-u", "platewatch")
+        broker.publish(duty, "0.8", "-u", "screen")
+        broker.publish(duty, "0.4", "-u", "gateway-table-1")
+        assert sink.get(timeout=8).payload == b"0.4"
+        assert sink.empty()
+        assert bus.publish("platewatch/table-1/peak", b"{}", retain=True, qos=1)
+        assert broker.listen("platewatch/# -u screen", 1) == ["platewatch/table-1/peak {}"]
+        assert not [what for what in told(bus, []) if what not in ("connected",)]
+    finally:
+        bus.stop()
+        broker.stop()

@@ -191,3 +191,17 @@ def test_little_room_is_told_two_days_ahead(desk: Desk) -> None:
     assert desk.record.state(0.0).little_room
     desk.writer.room = Room(200.0, 2.1)
     assert not desk.record.state(0.0).little_room
+
+
+def test_once_a_day_what_is_past_its_keeping_time_goes(desk: Desk) -> None:
+    """Retention needs no one who remembers it; the writer goes on meanwhile."""
+    desk.arrive(5)  # stamped in January 1970
+    desk.turn()
+    assert desk.stored() == 5
+    desk.clock.at_s = 91 * 86_400.0
+    desk.writer.turn(desk.clock.at_s)
+    until = time.monotonic() + 10
+    while not desk.store.notes() and time.monotonic() < until:
+        time.sleep(0.01)
+    assert desk.stored() == 0
+    assert "removed by retention" in desk.store.notes()[0].text
