@@ -32,6 +32,7 @@ from platewatch.compose_plate import (
     surround_channels,
     with_broker,
     with_limits,
+    with_patience,
 )
 from platewatch.errors import NoDataError, SettingsError
 from platewatch.session import Session
@@ -76,6 +77,7 @@ __all__ = [
     "wide_rows",
     "with_broker",
     "with_limits",
+    "with_patience",
     "write_table",
     "write_wide_log",
 ]

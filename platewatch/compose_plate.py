@@ -29,6 +29,7 @@ __all__ = [
     "thermal_channels",
     "with_broker",
     "with_limits",
+    "with_patience",
 ]
 
 REFERENCE_DEGC = 100.0  # where losses are linearised when no recipe names a set-point
@@ -101,6 +102,13 @@ def with_broker(description: Description, broker: str) -> Description:
         raise SettingsError(f"--broker {broker!r} is not HOST:PORT; write 127.0.0.1:1883")
     bus = replace(description.bus, host=host.strip("[]"), port=int(port))
     return replace(description, bus=bus)
+
+
+def with_patience(description: Description, late_s: float) -> Description:
+    """Ticks wait at least this long for stragglers."""
+    estimator = description.estimator
+    patient = replace(estimator, late_s=max(estimator.late_s, late_s))
+    return replace(description, estimator=patient)
 
 
 def with_limits(description: Description, other: Description) -> Description:
