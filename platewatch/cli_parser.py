@@ -163,19 +163,22 @@ def _replay(commands: Commands) -> None:
         "replay table-1.toml monday.csv --db monday.sqlite",
     )
     parser.add_argument("plate", metavar="PLATE.toml")
-    parser.add_argument("log", metavar="LOG", help="a wide CSV log or a platewatch database")
+    parser.add_argument(
+        "log", metavar="LOG", help="a wide log (CSV, Parquet) or a platewatch database"
+    )
     parser.add_argument("--db", metavar="OUT.sqlite", required=True, help="a new record")
     _times(parser)
     parser.add_argument("--speed", type=float, metavar="N", help="plate seconds a second")
     parser.add_argument(
-        "--columns", metavar="MAP.toml", default="", help="what a CSV's columns mean"
+        "--columns", metavar="MAP.toml", default="", help="what the columns of another file mean"
     )
     parser.add_argument(
-        "--limits", metavar="OTHER.toml", default="", help="its alarm limits instead"
+        "--limits",
+        metavar="OTHER.toml",
+        default="",
+        help="its alarm limits instead, and what they change",
     )
-    parser.add_argument(
-        "--offset", metavar="+01:00", default="", help="of a CSV's times that name none"
-    )
+    parser.add_argument("--offset", metavar="+01:00", default="", help="of times that name none")
     _json(parser)
 
 

@@ -9,6 +9,7 @@ import threading
 from argparse import Namespace
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import asdict
 from pathlib import Path
 
 from platewatch import compose
@@ -97,10 +98,9 @@ def demo(arguments: Namespace) -> int:
 def replay(arguments: Namespace) -> int:
     """Recorded readings into a new record; 1 if an alarm was raised."""
     from platewatch.replay import Wishes, replay_log
+    from platewatch.replay_compare import difference_lines, replay_both
 
     description = compose.describe(Path(arguments.plate))
-    if arguments.limits:
-        description = compose.with_limits(description, compose.describe(Path(arguments.limits)))
     if arguments.speed is not None and not arguments.speed > 0:
         raise SettingsError(f"--speed {arguments.speed:g} is not above 0; leave it out to go fast")
     wishes = Wishes(
@@ -110,12 +110,19 @@ def replay(arguments: Namespace) -> int:
         columns=Path(arguments.columns) if arguments.columns else None,
         offset=arguments.offset,
     )
+    log, out, clock = Path(arguments.log), Path(arguments.db), SystemClock()
+    lines: list[str] = []
+    found: dict[str, object] = {}
     with row_progress(sys.stderr) as told:
-        summary = replay_log(
-            description, Path(arguments.log), Path(arguments.db), SystemClock(), wishes, told
-        )
+        if arguments.limits:
+            limited = compose.with_limits(description, compose.describe(Path(arguments.limits)))
+            summary, changed = replay_both(description, limited, log, out, clock, wishes, told)
+            lines = difference_lines(changed, arguments.plate, arguments.limits)
+            found = {"differences": [asdict(each) for each in changed]}
+        else:
+            summary = replay_log(description, log, out, clock, wishes, told)
     if arguments.json:
-        print(json.dumps(summary.as_dict(), indent=2))
+        print(json.dumps(summary.as_dict() | found, indent=2))
     else:
-        print(replay_summary(summary))
+        print("\n".join([replay_summary(summary), *lines]))
     return 1 if summary.raised else 0
