@@ -16,6 +16,7 @@ from platewatch.daemon_writer import Writer
 from platewatch.errors import PlatewatchError, SettingsError
 
 IDLE_S = 0.05
+SHORT_S = 0.001
 NETWORK_WITHIN_S = 90.0  # the network thread comes round once a second
 WRITER_WITHIN_S = 60.0
 AGAIN_AFTER_S = 5.0  # a plate that failed is begun anew, each time after twice as long
@@ -65,7 +66,7 @@ def run_daemon(
             if for_s is not None and clock.monotonic() - started_s >= for_s:
                 break
             if not busy:
-                stop.wait(IDLE_S)
+                stop.wait(SHORT_S if daemon.expects else IDLE_S)
         service.stopping()
         daemon.stop()
 
@@ -95,6 +96,11 @@ class _Daemon:
     @property
     def plates(self) -> list[str]:
         return [each.description.plate.name for each in self._watched]
+
+    @property
+    def expects(self) -> bool:
+        """Is it worth looking again at once?"""
+        return any(each.run is not None and each.run.expects for each in self._watched)
 
     def take(self, descriptions: Sequence[compose.Description]) -> None:
         """Watch these; those that are watched as they are described go on as they were."""

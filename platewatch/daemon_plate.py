@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import logging
 import queue
+import time
 from collections import Counter, deque
 from collections.abc import Sequence
 from concurrent.futures import Future
@@ -25,6 +26,7 @@ MOST_AT_ONCE = 500  # messages in one turn, and
 MOST_TICKS_AT_ONCE = 20  # ticks, so that the other plates are not kept waiting
 ANNOUNCE_AFTER_S = 1.0  # an alarm is stored first, but never held up by the record
 BEGIN_AFTER_S = 10.0  # from the first reading, if most sensors were not heard before
+SOON_S = 0.02  # after an acknowledgement the broker sends what it held back
 STALLED_AFTER_S = 8.0  # without a message, while what came is not acknowledged
 CALM_LINE_EVERY_S = 600.0
 REMIND_EVERY_S = 600.0
@@ -89,6 +91,7 @@ class PlateRun:
         self._committed_s = self._polled_s = self._calm_s = self._reminded_s = now_s
         self._last_down_s = self._message_s = now_s
         self._first_s: float | None = None
+        self._acknowledged_s = float("-inf")  # of the machine's clock
         self._asked = False  # actions wait for a tick
         self._action_seq = self._take_up(closed_us)
 
@@ -114,6 +117,11 @@ class PlateRun:
     def network_s(self) -> float:
         """Seconds since the network thread came round; infinite if it is dead."""
         return self._bus.turned_s()
+
+    @property
+    def expects(self) -> bool:
+        """Is something due within milliseconds: a commit, or the messages that follow one?"""
+        return self.record.is_writing or time.monotonic() - self._acknowledged_s < SOON_S
 
     def turn(self) -> bool:
         """One round: take, estimate, store, answer.  True while there is more to do."""
@@ -306,7 +314,8 @@ class PlateRun:
         if due:
             self._committed_s = now_s
             self._bus.alive(compose.alive_message("alive", self._clock.utc_us(), self.run_no))
-        self._bus.acknowledge(settled.tokens)
+        if self._bus.acknowledge(settled.tokens):
+            self._acknowledged_s = time.monotonic()
         stored = {id(outcome) for outcome in settled.outcomes}
         while self._unannounced:
             since_s, outcome = self._unannounced[0]
