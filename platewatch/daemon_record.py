@@ -140,8 +140,10 @@ class PlateRecord:
         return tokens
 
     def drop_oldest(self, now_us: int) -> Sequence[compose.Token]:
-        """Where memory's share is used up: the oldest readings go, and are counted."""
-        if len(self.waiting.readings) <= MOST_UNSTORED:
+        """Where nothing is stored and memory's share is used up: the oldest readings go, and
+        are counted.  A backlog may fill it between two commits that go well; it only waits."""
+        is_stuck = self.in_trouble or self.writer.busy_s() >= FAILING_AFTER_S
+        if not is_stuck or len(self.waiting.readings) <= MOST_UNSTORED:
             return ()
         tokens = self.release(now_us)
         del self.waiting.readings[:DROPPED_AT_ONCE]
