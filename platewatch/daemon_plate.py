@@ -17,7 +17,17 @@ from platewatch.daemon_record import PlateRecord
 from platewatch.daemon_writer import Writer
 from platewatch.errors import StorageError
 from platewatch.session import RecordState, record_event
-from platewatch.types import Action, AlarmState, Gap, LimitRow, Outcome, PeakRow, Reading, Refused
+from platewatch.types import (
+    Action,
+    AlarmState,
+    CauseRow,
+    Gap,
+    LimitRow,
+    Outcome,
+    PeakRow,
+    Reading,
+    Refused,
+)
 
 COMMIT_EVERY_S = 1.0
 COMMIT_AT = 16  # messages; a broker sends no more than 20 ahead of their acknowledgement
@@ -82,6 +92,8 @@ class PlateRun:
         self._sources, self._repeats = SourceClocks(), words.Repeats()
         self._heard: Counter[str] = Counter()
         self._passing: dict[str, LimitRow] = {}
+        self._causes: tuple[CauseRow, ...] = ()
+        self._question = ""
         self._standing = {(e.alarm, e.subject): e for e in store.alarm_states(self.plate)}
         self._unannounced: deque[tuple[float, Outcome]] = deque()
         self._kept = RecordState()
@@ -275,10 +287,18 @@ class PlateRun:
         for outcome in outcomes:
             self._asked = False
             if self.latest is None and outcome.peak is not None:
-                self._first_readings()
+                plate = self.description.plate
+                names = [s.name for s in plate.sensors], [z.name for z in plate.zones]
+                self._log.info(words.first_line(self._heard, *names))
             self.latest = outcome.peak or self.latest
             self._passing |= {row.alarm_limit: row for row in outcome.limits}
             self._tell_gap(outcome)
+            for text in outcome.notes:
+                self._log.error("a fault of platewatch: %s; readings are recorded", text)
+            self._causes = outcome.causes or self._causes
+            if outcome.question and outcome.question != self._question:
+                self._log.info("question: %s Answer with platewatch answer", outcome.question)
+            self._question = outcome.question or self._question
             if outcome.alarm_events:
                 self._unannounced.append((now_s, outcome))
         self.record.waiting.outcomes += outcomes
@@ -291,18 +311,6 @@ class PlateRun:
         elif self._gap is not None:
             self._log.warning("%s", words.gap_line(self._gap))
             self._gap = None
-
-    def _first_readings(self) -> None:
-        plate = self.description.plate
-        sensors = sum(1 for s in plate.sensors if self._heard[f"sensor/{s.name}"])
-        duties = sum(1 for z in plate.zones if self._heard[f"zone/{z.name}/duty"])
-        self._log.info(
-            "first readings: %d of %d sensors, %d of %d duties",
-            sensors,
-            len(plate.sensors),
-            duties,
-            len(plate.zones),
-        )
 
     def _settle(self, now_s: float) -> None:
         """Store all or nothing; only what is stored is acknowledged, and then announced."""
@@ -345,7 +353,9 @@ class PlateRun:
             return
         shown = self.session.monitor.shown_limit
         row = self._passing.get(shown.name) if shown else None
-        body = compose.peak_message(outcomes[-1].peak, self.run_no, row.to_limit_s if row else None)
+        body = compose.peak_message(
+            outcomes[-1].peak, self.run_no, row.to_limit_s if row else None, self._causes
+        )
         self._bus.publish(compose.topic_of(self.plate, "peak"), body)
 
     def _watch_record(self, now_s: float) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import logging
 import sys
+from collections.abc import Mapping, Sequence
 from typing import TextIO
 
 from platewatch.types import AlarmEvent, AlarmState, Gap, PeakRow
@@ -102,6 +103,13 @@ def alarm_line(event: AlarmEvent) -> tuple[int, str]:
             return logging.INFO, f"alarm {name} is over{by}"
         case _:
             return logging.INFO, f"alarm {name}: {event.to_state.replace('_', ' ')}"
+
+
+def first_line(heard: Mapping[str, int], sensors: Sequence[str], zones: Sequence[str]) -> str:
+    """How many of the described channels have spoken; `heard` counts readings by channel."""
+    read = sum(1 for name in sensors if heard.get(f"sensor/{name}"))
+    duties = sum(1 for name in zones if heard.get(f"zone/{name}/duty"))
+    return f"first readings: {read} of {len(sensors)} sensors, {duties} of {len(zones)} duties"
 
 
 def gap_line(gap: Gap) -> str:

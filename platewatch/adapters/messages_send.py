@@ -8,7 +8,7 @@ from typing import Any
 import msgspec
 
 from platewatch import units
-from platewatch.types import AlarmEvent, PeakRow
+from platewatch.types import AlarmEvent, CauseRow, PeakRow
 
 ROOT = "platewatch"
 
@@ -93,7 +93,7 @@ def peak_message(
     row: PeakRow,
     run: int,
     to_limit_s: Sequence[float | None] | None = None,
-    causes: Sequence[CauseSaid] = (),
+    causes: Sequence[CauseRow] = (),
 ) -> bytes:
     """The peak row of a tick, with the quantiles of the time to the limit and the causes."""
     return encode(
@@ -112,7 +112,7 @@ def peak_message(
             alarm_limit_degC=row.limit_degC,
             p_over=row.p_over,
             to_limit_s=to_limit_s,
-            causes=tuple(causes),
+            causes=tuple(CauseSaid(c.cause, c.place, c.probability) for c in causes),
         )
     )
 

@@ -6,7 +6,6 @@ import json
 import math
 
 from platewatch.adapters.messages_send import (
-    CauseSaid,
     alarm_message,
     alarm_topic,
     alive_message,
@@ -14,7 +13,7 @@ from platewatch.adapters.messages_send import (
     peak_message,
     topic_of,
 )
-from platewatch.types import AlarmEvent, AlarmState, PeakRow
+from platewatch.types import AlarmEvent, AlarmState, CauseRow, PeakRow
 
 AT = 1_772_352_000_000_000
 
@@ -54,7 +53,7 @@ EVENT = AlarmEvent(
 def test_the_peak_message_has_the_members_that_plants_read() -> None:
     """The contract of platewatch/<plate>/peak: names, nesting, units in the names."""
     said = json.loads(
-        peak_message(ROW, 7, (300.0, 460.0, None), (CauseSaid("cold load", "Z2", 0.6),))
+        peak_message(ROW, 7, (300.0, 460.0, None), (CauseRow(0, "cold load", "Z2", 0.6),))
     )
     assert said == {
         "at": "2026-03-01T08:00:00Z",
