@@ -234,7 +234,8 @@ class PlateRun:
         if self.session.duplicates > twice:
             count, seen_us = self.session.duplicates - twice, arrived[-1].seen_us
             told = "same channel and time as one that was there already"
-            self._count(Refused("", "", "duplicate", count, seen_us, seen_us, told, ""))
+            refused = Refused("", "", "duplicate", count, seen_us, seen_us, told, "")
+            self.record.waiting.count(refused)
 
     def _set_aside(self, why: str, count: int) -> None:
         told = self._repeats.due(why, self._clock.monotonic(), count) if count else 0
@@ -244,25 +245,11 @@ class PlateRun:
     def _refused(self, refusal: compose.Refusal, seen_us: int) -> None:
         if refusal.reading is not None:
             self.record.waiting.readings.append(refusal.reading)
-        self._count(
-            Refused(
-                refusal.topic,
-                refusal.channel,
-                str(refusal.reason),
-                1,
-                seen_us,
-                seen_us,
-                refusal.detail,
-                refusal.excerpt,
-            )
-        )
+        self.record.waiting.count_refusal(refusal, seen_us)
         told = self._repeats.due(f"refused {refusal.reason}", self._clock.monotonic())
         if told:
             more = f" ({told} like it since the last such line)" if told > 1 else ""
             self._log.warning("refused: %s%s", refusal, more)
-
-    def _count(self, refused: Refused) -> None:
-        self.record.waiting.count(refused)
 
     def _poll_actions(self, now_s: float) -> None:
         """What people asked for; read in the writing thread, so that nothing here waits."""
@@ -296,9 +283,9 @@ class PlateRun:
             for text in outcome.notes:
                 self._log.error("a fault of platewatch: %s; readings are recorded", text)
             self._causes = outcome.causes or self._causes
-            if outcome.question and outcome.question != self._question:
-                self._log.info("question: %s Answer with platewatch answer", outcome.question)
-            self._question = outcome.question or self._question
+            if outcome.question not in ("", self._question):
+                self._question = outcome.question
+                self._log.info("question: %s (platewatch answer yes or no)", self._question)
             if outcome.alarm_events:
                 self._unannounced.append((now_s, outcome))
         self.record.waiting.outcomes += outcomes

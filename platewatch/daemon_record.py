@@ -54,6 +54,12 @@ class Unstored:
             refused = replace(refused, count=count, first_us=known.first_us)
         self.refused[key] = refused
 
+    def count_refusal(self, refusal: compose.Refusal, seen_us: int) -> None:
+        """Add one message, or one value of it, that could not be used."""
+        topic, channel, reason = refusal.topic, refusal.channel, str(refusal.reason)
+        told = refusal.detail, refusal.excerpt
+        self.count(Refused(topic, channel, reason, 1, seen_us, seen_us, *told))
+
     def put_back(self, earlier: Unstored) -> None:
         """Before what has come since."""
         self.readings[:0] = earlier.readings

@@ -9,7 +9,8 @@ from collections import deque
 from collections.abc import Iterable, Mapping
 from dataclasses import replace
 
-from platewatch.monitor.annunciate import apply_conditions
+from platewatch.monitor.annunciate import apply_actions, apply_conditions
+from platewatch.monitor.conditions import BLIND_AFTER_S, picture_blind
 from platewatch.monitor.pipeline import Monitor, State, first, resume, step
 from platewatch.monitor.record_room import (
     ALARM,
@@ -61,6 +62,7 @@ class Session:
         self._state: State = first(monitor) if fresh else resume(monitor, shot, alarms or {})
         self._due: deque[Tick] = deque()  # closed, and not gone through yet
         self._record = RecordState()
+        self._failing_since_us: int | None = None
         self._gap: Gap | None = None  # the silence that the ticks are in, or that is being filled
 
     @property
@@ -130,8 +132,46 @@ class Session:
         return [self._step(self._due.popleft()) for _ in range(count)]
 
     def _step(self, tick: Tick) -> Outcome:
-        self._state, outcome = step(self._monitor, self._state, tick)
-        return self._watch_gap(tick, self._watch_record(tick, outcome))
+        return self._watch_gap(tick, self._watch_record(tick, self._estimate(tick)))
+
+    def _estimate(self, tick: Tick) -> Outcome:
+        """One step of the estimator; whatever goes wrong in it, the record goes on.
+
+        An estimate that cannot be continued is begun anew from this tick, and where that
+        fails too, the tick has none: told once, and blind after as long as without readings.
+        A replay of the same ticks fails alike.
+        """
+        try:
+            self._state, outcome = step(self._monitor, self._state, tick)
+            self._failing_since_us = None
+            return outcome
+        except Exception as error:
+            why = f"the estimate could not be continued and was begun anew: {error!r}"
+        kept = self._state.alarms
+        try:
+            afresh = replace(first(self._monitor), alarms=kept)
+            self._state, outcome = step(self._monitor, afresh, tick)
+            self._failing_since_us = None
+            return replace(outcome, notes=(*outcome.notes, why))
+        except Exception as error:
+            return self._without_estimate(tick, f"there is no estimate: {error!r}")
+
+    def _without_estimate(self, tick: Tick, why: str) -> Outcome:
+        is_new = self._failing_since_us is None
+        if self._failing_since_us is None:
+            self._failing_since_us = tick.at_us
+        alarms, events = apply_actions(self._state.alarms, tick)
+        failing_us = tick.at_us - self._failing_since_us
+        blind = picture_blind(self._monitor.words, failing_us, round(BLIND_AFTER_S * 1e6), True)
+        blind = replace(blind, message=f"Blind: {why}. Look at the plant's own instruments.")
+        alarms, raised = apply_conditions(alarms, [blind], tick)
+        self._state = replace(first(self._monitor), alarms=alarms)
+        return Outcome(
+            tick.at_us,
+            alarm_events=events + raised,
+            notes=(why,) if is_new else (),
+            applied=tuple(action.seq for action in tick.actions),
+        )
 
     def _watch_record(self, tick: Tick, outcome: Outcome) -> Outcome:
         """Raise and clear the alarm about the record itself."""

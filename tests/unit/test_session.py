@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from platewatch.compose_plate import Monitor, build_monitor, describe
@@ -102,3 +104,30 @@ def test_ticks_can_be_gone_through_a_few_at_a_time(monitor: Monitor) -> None:
         if not session.is_behind:
             break
     assert [o.peak for o in parts] == [o.peak for o in whole.close()]
+
+
+def test_an_estimator_that_fails_stops_neither_the_record_nor_the_alarms(monitor: Monitor) -> None:
+    """Never silent: noted once, blind after 10 s; every tick still has its outcome."""
+    broken = replace(monitor, draws=monitor.draws[:, :1])
+    session = Session(broken)
+    take(session, range(0, 40, 2))
+    outcomes = session.finish()
+    assert [(o.at_us - START) // S for o in outcomes] == list(range(0, 40, 2))
+    assert sum(len(o.notes) for o in outcomes) == 1
+    assert raised(outcomes) == [("picture-blind", "plate", "high")]
+    assert session.state.alarms
+
+
+def test_an_estimate_that_cannot_be_continued_is_begun_anew(monitor: Monitor) -> None:
+    """The next tick has a picture again, made from its readings alone."""
+    session = Session(monitor)
+    take(session, range(0, 20, 2))
+    session.finish()
+    picture = session.state.picture
+    assert picture is not None
+    belief = replace(picture.belief, cov=np.full_like(picture.belief.cov, np.nan))
+    session._state = replace(session.state, picture=replace(picture, belief=belief))
+    take(session, range(20, 24, 2))
+    outcomes = session.finish()
+    assert [len(o.notes) for o in outcomes] == [1, 0]
+    assert all(o.peak is not None and abs(o.peak.now_degC - 60.0) < 15.0 for o in outcomes)
