@@ -6,6 +6,7 @@ import json
 import signal
 import sys
 import threading
+import warnings
 from argparse import Namespace
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -23,6 +24,8 @@ from platewatch.errors import SettingsError
 def run(arguments: Namespace) -> int:
     """Watch plates until told to stop; SIGHUP reads the descriptions again."""
     log = open_log(arguments.json_log)
+    # An overflow shows as an estimate that is begun anew, which is told in plain words.
+    warnings.simplefilter("ignore", RuntimeWarning)
     with stop_on_signals() as stop, set_on_hangup() as reload:
         run_daemon(
             _described(arguments),
