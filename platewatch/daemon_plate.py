@@ -274,9 +274,7 @@ class PlateRun:
         for outcome in outcomes:
             self._asked = False
             if self.latest is None and outcome.peak is not None:
-                plate = self.description.plate
-                names = [s.name for s in plate.sensors], [z.name for z in plate.zones]
-                self._log.info(words.first_line(self._heard, *names))
+                self._log.info(words.first_line(self._heard, self._routes.units))
             self.latest = outcome.peak or self.latest
             self._passing |= {row.alarm_limit: row for row in outcome.limits}
             self._tell_gap(outcome)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import logging
 import sys
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping
 from typing import TextIO
 
 from platewatch.types import AlarmEvent, AlarmState, Gap, PeakRow
@@ -105,11 +105,12 @@ def alarm_line(event: AlarmEvent) -> tuple[int, str]:
             return logging.INFO, f"alarm {name}: {event.to_state.replace('_', ' ')}"
 
 
-def first_line(heard: Mapping[str, int], sensors: Sequence[str], zones: Sequence[str]) -> str:
+def first_line(heard: Mapping[str, int], channels: Collection[str]) -> str:
     """How many of the described channels have spoken; `heard` counts readings by channel."""
-    read = sum(1 for name in sensors if heard.get(f"sensor/{name}"))
-    duties = sum(1 for name in zones if heard.get(f"zone/{name}/duty"))
-    return f"first readings: {read} of {len(sensors)} sensors, {duties} of {len(zones)} duties"
+    sensors = [name for name in channels if name.startswith("sensor/")]
+    duties = [name for name in channels if name.endswith("/duty")]
+    read, asked = (sum(1 for n in names if heard.get(n)) for names in (sensors, duties))
+    return f"first readings: {read} of {len(sensors)} sensors, {asked} of {len(duties)} duties"
 
 
 def gap_line(gap: Gap) -> str:
