@@ -113,9 +113,12 @@ def _check(commands: Commands) -> None:
         commands,
         "check",
         "read a plate description, list every mistake, else the facts that follow from it",
-        "check config/demo-table.toml",
+        "check config/demo-table.toml --picture table.svg",
     )
     parser.add_argument("plate", metavar="PLATE.toml")
+    parser.add_argument(
+        "--picture", metavar="OUT.svg", default="", help="draw the plate as described"
+    )
     _json(parser)
 
 
@@ -208,7 +211,7 @@ def _whatif(commands: Commands) -> None:
         "--load", metavar="NAME", action="append", default=[], help="a [[contact]] lying on"
     )
     parser.add_argument("--at", metavar="X,Y", action="append", default=[], help="a place, mm")
-    parser.add_argument("--picture", metavar="OUT.svg", default="")
+    parser.add_argument("--picture", metavar="OUT.svg", default="", help="draw the field")
     _json(parser)
 
 

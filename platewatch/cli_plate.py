@@ -19,12 +19,16 @@ def check(arguments: Namespace) -> int:
     """Every mistake of a description, else what follows from it."""
     description = compose.describe(Path(arguments.plate))
     facts = study.derive_facts(description)
+    if arguments.picture:
+        _write_picture(Path(arguments.picture), study.draw_plate(description))
     if arguments.json:
         told = asdict(facts) | {"warnings": list(facts.warnings)}
         print(json.dumps(told, indent=2))
         return 0
     for line in _fact_lines(facts, Degrees(description.unit)):
         print(line)
+    if arguments.picture:
+        print(f"picture in {arguments.picture}")
     return 0
 
 
@@ -97,7 +101,7 @@ def whatif(arguments: Namespace) -> int:
     )
     at = [(x, y, found.at(x / 1e3, y / 1e3)) for x, y in places]
     if arguments.picture:
-        _write_picture(Path(arguments.picture), study.svg_picture(found))
+        _write_picture(Path(arguments.picture), study.draw_field(description, found))
     if arguments.json:
         print(json.dumps(_whatif_object(found, at), indent=2))
         return 0
@@ -166,6 +170,8 @@ def _place(text: str) -> tuple[float, float]:
 
 
 def _write_picture(path: Path, svg: str) -> None:
+    if path.suffix.lower() != ".svg":
+        raise SettingsError(f"--picture {path}: only SVG can be drawn; give a name in .svg")
     try:
         path.write_text(svg, encoding="utf-8")
     except OSError as error:

@@ -7,15 +7,29 @@ from collections.abc import Mapping, Sequence
 from platewatch.compose_plate import Description, build_monitor, reference_degC
 from platewatch.studies.facts import Facts, derive
 from platewatch.studies.picture import svg_picture
+from platewatch.studies.picture_plate import plate_picture
 from platewatch.studies.whatif import WhatIf, whatif_steady, whatif_transient
 from platewatch.thermal.conduction import NOMINAL_AMBIENT_DEGC
+from platewatch.thermal.grid import build_grid
+from platewatch.units import TemperatureUnit
 
-__all__ = ["Facts", "WhatIf", "derive_facts", "svg_picture", "what_if"]
+__all__ = ["Facts", "WhatIf", "derive_facts", "draw_field", "draw_plate", "what_if"]
 
 
 def derive_facts(description: Description) -> Facts:
     """What follows from a description, for `check`."""
-    return derive(build_monitor(description).quiet, reference_degC(description))
+    quiet = build_monitor(description, causes=False).quiet
+    return derive(quiet, reference_degC(description))
+
+
+def draw_plate(description: Description) -> str:
+    """The plate as described, SVG."""
+    return plate_picture(description.plate, build_grid(description.plate))
+
+
+def draw_field(description: Description, found: WhatIf) -> str:
+    """A calculated field in the plate's own unit, SVG."""
+    return svg_picture(found, TemperatureUnit(description.unit))
 
 
 def what_if(

@@ -5,15 +5,24 @@ from __future__ import annotations
 import base64
 import struct
 import zlib
-from html import escape
 
 import numpy as np
-import shapely
 from numpy.typing import NDArray
 
+from platewatch.studies.picture_frame import (
+    LETTER_PX,
+    MARGIN_PX,
+    SIGN,
+    Frame,
+    clamps,
+    drawing,
+    sensors,
+    written,
+    zones,
+)
 from platewatch.studies.whatif import CAUTION, WhatIf
-from platewatch.thermal.plate import Shape, geometry
 from platewatch.types import Array
+from platewatch.units import TemperatureUnit, from_degC
 
 # Cividis (Nunez, Anderton & Renslow 2018), ten even steps, from memory: perceptually even,
 # the same to colour-blind readers and in grey.
@@ -31,74 +40,60 @@ CIVIDIS = np.array(
         [0xFF, 0xEA, 0x46],
     ]
 )
-WIDTH_PX = 720.0  # of the plate
-MARGIN_PX = 24.0
 BAR_PX = 150.0  # room for the scale
 
 
-def svg_picture(result: WhatIf, lowest: float | None = None, highest: float | None = None) -> str:
-    """Plate, zones, thermocouples, hottest place, scale with numbers and the caution.
+def svg_picture(
+    result: WhatIf,
+    unit: TemperatureUnit = TemperatureUnit.DEGC,
+    lowest: float | None = None,
+    highest: float | None = None,
+) -> str:
+    """Plate, zones, thermocouples, clamps, hottest place, scale with numbers and the caution.
 
-    lowest, highest: ends of the scale, degC; else those of the field.
+    unit: of the numbers written;  lowest, highest: ends of the scale, degC; else the field's
     """
     low = result.coldest_degC if lowest is None else lowest
     high = max(result.hottest_degC if highest is None else highest, low + 1e-3)
-    left, bottom, right, top = result.grid.domain.bounds
-    scale = WIDTH_PX / max(right - left, top - bottom)
-    frame = _Frame(left, top, scale)
-    height = scale * (top - bottom)
-    total = (scale * (right - left) + BAR_PX + 2 * MARGIN_PX, height + 5 * MARGIN_PX)
+    frame = Frame(result.grid.domain.bounds, MARGIN_PX, 1.5 * MARGIN_PX)
+    title, outline = _title(result, unit), frame.path(result.grid.domain)
+    notes = [*CAUTION.replace(". ", ".\n", 1).split("\n"), *_standpoint(result)]
+    foot = frame.top + frame.height + 1.5 * MARGIN_PX
     parts = [
-        f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="0 0 {total[0]:.0f} {total[1]:.0f}" '
-        'font-family="sans-serif" font-size="14" role="img">',
-        f"<title>{escape(_title(result))}</title>",
-        f'<rect width="{total[0]:.0f}" height="{total[1]:.0f}" fill="#fff"/>',
-        f'<text x="{MARGIN_PX}" y="{MARGIN_PX - 6}">{escape(_title(result))}</text>',
-        f'<clipPath id="plate"><path clip-rule="evenodd" d="{frame.path(result.grid.domain)}"/>'
-        "</clipPath>",
+        written(MARGIN_PX, MARGIN_PX - 6, title),
+        f'<clipPath id="plate"><path clip-rule="evenodd" d="{outline}"/></clipPath>',
         _field(result, frame, low, high),
-        f'<path d="{frame.path(result.grid.domain)}" fill="none" stroke="#000" stroke-width="2"/>',
-        *_zones(result, frame),
-        *_sensors(result, frame),
+        f'<path d="{outline}" fill="none" stroke="#000" stroke-width="2"/>',
+        *zones(result.plate, frame, "#fff"),
+        *clamps(result.plate, frame),
+        *sensors(result.plate, frame),
         _hottest(result, frame),
-        *_scale_bar(scale * (right - left) + 2 * MARGIN_PX, height, low, high),
-        *_caution(height + 3 * MARGIN_PX),
-        "</svg>",
+        *_scale_bar(frame.left + frame.width + MARGIN_PX, frame, low, high, unit),
+        *(written(MARGIN_PX, foot + 20 * n, note) for n, note in enumerate(notes)),
     ]
-    return "\n".join(parts)
+    width = max(frame.width + BAR_PX + 2 * MARGIN_PX, LETTER_PX * len(title) + 2 * MARGIN_PX)
+    return drawing(width, foot + 20 * len(notes), title, parts)
 
 
-class _Frame:
-    """From metres on the plate to pixels; y turns round."""
-
-    def __init__(self, left_m: float, top_m: float, scale: float) -> None:
-        self.left_m, self.top_m, self.scale = left_m, top_m, scale
-
-    def xy(self, x_m: float, y_m: float) -> tuple[float, float]:
-        return (
-            MARGIN_PX + self.scale * (x_m - self.left_m),
-            1.5 * MARGIN_PX + self.scale * (self.top_m - y_m),
-        )
-
-    def path(self, shape: shapely.Polygon) -> str:
-        rings = [shape.exterior, *shape.interiors]
-        return " ".join(self._ring(np.asarray(ring.coords)) for ring in rings)
-
-    def _ring(self, corners: Array) -> str:
-        pixels = [self.xy(float(x), float(y)) for x, y in corners[:-1]]
-        return "M" + "L".join(f"{x:.1f} {y:.1f}" for x, y in pixels) + "Z"
+def _standpoint(result: WhatIf) -> list[str]:
+    note = result.plate.position_note
+    return [f"Operator's standpoint: {note}."] if note else []
 
 
-def _title(result: WhatIf) -> str:
+def _title(result: WhatIf, unit: TemperatureUnit) -> str:
     when = "steady" if result.after_s is None else f"after {result.after_s:g} s"
     return (
-        f"{result.plate.name}, {when}: hottest {result.hottest_degC:.1f} °C at "
+        f"{result.plate.name}, {when}: hottest {_degrees(result.hottest_degC, unit)} at "
         f"{1e3 * result.hottest_x_m:.0f}, {1e3 * result.hottest_y_m:.0f} mm, "
-        f"mean {result.mean_degC:.1f} °C (calculated)"
+        f"mean {_degrees(result.mean_degC, unit)} (calculated)"
     )
 
 
-def _field(result: WhatIf, frame: _Frame, low: float, high: float) -> str:
+def _degrees(degC: float, unit: TemperatureUnit) -> str:
+    return f"{from_degC(degC, unit):.1f} {SIGN[unit]}"
+
+
+def _field(result: WhatIf, frame: Frame, low: float, high: float) -> str:
     grid = result.grid
     values = np.full(grid.index.shape, np.nan)
     values[grid.rows, grid.columns] = result.T
@@ -133,33 +128,7 @@ def _png(rgba: NDArray[np.uint8]) -> bytes:
     )
 
 
-def _zones(result: WhatIf, frame: _Frame) -> list[str]:
-    parts = []
-    for zone in result.plate.zones:
-        for shape in zone.shapes:
-            parts.append(
-                f'<path d="{_outline(frame, shape)}" fill="none" stroke="#fff" '
-                'stroke-width="1.5" stroke-dasharray="6 4"/>'
-            )
-        left, _, _, top = geometry(zone.shapes[0]).bounds
-        parts.append(_label(*frame.xy(left, top), zone.name, 4, 16))
-    return parts
-
-
-def _outline(frame: _Frame, shape: Shape) -> str:
-    return frame.path(geometry(shape))
-
-
-def _sensors(result: WhatIf, frame: _Frame) -> list[str]:
-    parts = []
-    for sensor in result.plate.sensors:
-        x, y = frame.xy(sensor.x_m, sensor.y_m)
-        parts.append(f'<circle cx="{x:.1f}" cy="{y:.1f}" r="4" fill="#fff" stroke="#000"/>')
-        parts.append(_label(x, y, sensor.name, 7, 5))
-    return parts
-
-
-def _hottest(result: WhatIf, frame: _Frame) -> str:
+def _hottest(result: WhatIf, frame: Frame) -> str:
     x, y = frame.xy(result.hottest_x_m, result.hottest_y_m)
     cross = f"M{x - 9:.1f} {y:.1f}h18M{x:.1f} {y - 9:.1f}v18"
     return (
@@ -168,38 +137,18 @@ def _hottest(result: WhatIf, frame: _Frame) -> str:
     )
 
 
-def _label(x: float, y: float, text: str, right: float, down: float) -> str:
-    """Black on a white rim: legible on every colour of the scale."""
-    return (
-        f'<text x="{x + right:.1f}" y="{y + down:.1f}" stroke="#fff" stroke-width="3" '
-        f'paint-order="stroke" fill="#000">{escape(text)}</text>'
-    )
-
-
-def _scale_bar(x: float, height: float, low: float, high: float) -> list[str]:
-    top = 1.5 * MARGIN_PX
+def _scale_bar(x: float, frame: Frame, low: float, high: float, unit: TemperatureUnit) -> list[str]:
     stops = "".join(
         f'<stop offset="{1 - i / (len(CIVIDIS) - 1):.3f}" stop-color="rgb({r},{g},{b})"/>'
         for i, (r, g, b) in reversed(list(enumerate(CIVIDIS.tolist())))
     )
     parts = [
         f'<linearGradient id="scale" x1="0" y1="0" x2="0" y2="1">{stops}</linearGradient>',
-        f'<rect x="{x:.1f}" y="{top:.1f}" width="22" height="{height:.1f}" '
+        f'<rect x="{x:.1f}" y="{frame.top:.1f}" width="22" height="{frame.height:.1f}" '
         'fill="url(#scale)" stroke="#000"/>',
     ]
     for part in np.linspace(0, 1, 6):
-        y = top + (1 - part) * height
+        y = frame.top + float(1 - part) * frame.height
         parts.append(f'<path d="M{x + 22:.1f} {y:.1f}h6" stroke="#000"/>')
-        parts.append(
-            f'<text x="{x + 32:.1f}" y="{y + 5:.1f}">{low + part * (high - low):.1f} °C</text>'
-        )
+        parts.append(written(x + 32, y + 5, _degrees(float(low + part * (high - low)), unit)))
     return parts
-
-
-def _caution(y: float) -> list[str]:
-    """In two lines, so that a narrow plate shows all of it."""
-    first, second = CAUTION.split(". ", 1)
-    return [
-        f'<text x="{MARGIN_PX}" y="{y:.1f}">{escape(first)}.</text>',
-        f'<text x="{MARGIN_PX}" y="{y + 20:.1f}">{escape(second)}</text>',
-    ]

@@ -24,12 +24,14 @@ class Rim:
     cell (p,);  length_m (p,)
     s_m (p,): distance from the cell's centre to the piece, negative where the centre is outside
     edge (p,): index into plate.edges, -1 where none is described (insulated)
+    ends_m (p, 2, 2): start and end of each piece, x and y
     """
 
     cell: Ints
     length_m: Array
     s_m: Array
     edge: Ints
+    ends_m: Array
 
 
 def find_rim(
@@ -42,7 +44,7 @@ def find_rim(
 ) -> Rim:
     """Cut outline and holes at the grid lines and give each piece to the cell inside."""
     oriented = shapely.geometry.polygon.orient(domain)
-    cells, lengths, distances, edges = [], [], [], []
+    cells, lengths, distances, edges, ends = [], [], [], [], []
     for ring, is_hole in [(oriented.exterior, False), *((r, True) for r in oriented.interiors)]:
         a, b = _pieces(np.asarray(ring.coords), frame)
         length = np.hypot(*(b - a).T)
@@ -54,7 +56,8 @@ def find_rim(
         lengths.append(length)
         distances.append(np.einsum("pi,pi->p", centre - middle, inward))
         edges.append(_edge_of(plate, middle, -inward, is_hole, domain.bounds))
-    return Rim(*(np.concatenate(part) for part in (cells, lengths, distances, edges)))
+        ends.append(np.stack((a, b), axis=1))
+    return Rim(*(np.concatenate(part) for part in (cells, lengths, distances, edges, ends)))
 
 
 def _pieces(corners: Array, frame: Frame) -> tuple[Array, Array]:

@@ -156,5 +156,5 @@ def test_the_picture_escapes_names_from_the_description():
     """A plate called `<b>` stays text."""
     result = whatif_steady(replace(plate(), name="<b>&"), POWERS, cell_m=0.03)
     assert "<b>&" not in svg_picture(result)
-    assert ET.fromstring(svg_picture(result, 0.0, 300.0)) is not None
+    assert ET.fromstring(svg_picture(result, lowest=0.0, highest=300.0)) is not None
     assert np.isfinite(result.T).all()
