@@ -14,6 +14,7 @@ from platewatch.thermal.conduction import ThermalModel
 from platewatch.thermal.plate import Plate, Zone, geometry
 from platewatch.types import Array
 
+COARSE_K = 0.5  # above, what the reduced model leaves out is worth a warning
 THIN_BIOT = 0.1  # above, a plate is not of one temperature through its thickness
 SETTLING_TICKS = 60
 SETTLING_TICK_US = 20_000_000
@@ -72,6 +73,11 @@ class Facts:
                 f"Biot number {self.biot:.2f} is above {THIN_BIOT:g}: the faces and the core of "
                 "this plate differ in temperature, which platewatch does not see; "
                 "its band is too narrow there"
+            )
+        if self.error_K > COARSE_K:
+            found.append(
+                f"the reduced model is up to {self.error_K:.2g} K off the full one, which the band "
+                "does not hold; look for a property or loss that changes abruptly"
             )
         found += [
             f"zone {each.zone}: no thermocouple within one spread length; its temperature is "

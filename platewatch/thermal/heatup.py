@@ -47,14 +47,12 @@ def inputs_at(u: Array, lag_s: Array, t: float) -> Array:
 
 
 def heat_up(model: ThermalModel) -> HeatUp:
-    """From the mean ambient until the plate has taken up the heat of its reference."""
-    ambients = [i.nominal for i in model.inputs if i.kind is InputKind.TEMPERATURE]
-    ambient = float(np.mean(ambients)) if ambients else 22.0
+    """From the plate at rest until it has taken up the heat of its reference."""
     zones = model.plate.zones
     u = input_vector(model, {zone.name: zone.watts for zone in zones})
     lag_s = np.zeros(u.size)
     lag_s[: len(zones)] = [zone.lag_s for zone in zones]
-    initial = np.full(model.grid.n, ambient)
+    initial = _at_rest(model)
     dt = _end_s(model, u, initial) / (STEPS * (2**DOUBLINGS - 1))
     t, T, fields, steps = 0.0, initial, [], []
 
@@ -118,6 +116,17 @@ def bend(
     return float(np.abs((true - ours) @ V.T).max())
 
 
+def _at_rest(model: ThermalModel) -> Array:
+    """The unheated plate between its surroundings, (n,) degC.
+
+    A held edge is no step there: nobody sets a warm frame to a cold plate in an instant.
+    """
+    ambients = {i.nominal for i in model.inputs if i.kind is InputKind.TEMPERATURE}
+    if model.has_loss and len(ambients) > 1:
+        return steady(model, input_vector(model, {}))
+    return np.full(model.grid.n, ambients.pop() if ambients else 22.0)
+
+
 def _stepped(rates: Array, dt: Array, a: Array, slope: Callable[[float, Array], Array]) -> Array:
     """States (s, r) after each step."""
     states, t = [], 0.0
@@ -133,11 +142,12 @@ def _stepped(rates: Array, dt: Array, a: Array, slope: Callable[[float, Array], 
 def _end_s(model: ThermalModel, u: Array, initial: Array) -> float:
     total_C = float(model.capacity.sum())
     heat = float((model.B @ u + model.offset - model.K @ initial).sum())
-    rise = max(model.reference_degC - float(initial[0]), 1.0)
+    start = float(np.average(initial, weights=model.capacity))
+    rise = max(model.reference_degC - start, 1.0)
     if heat <= 0:
         return 3600.0
     end_s = total_C * rise / heat
     if model.has_loss:
-        settled = float(np.average(steady(model, u), weights=model.capacity)) - float(initial[0])
+        settled = float(np.average(steady(model, u), weights=model.capacity)) - start
         end_s = min(end_s, 3 * total_C * max(settled, 1e-3) / heat)
     return end_s

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 import thin_plates
@@ -19,9 +21,12 @@ from platewatch.thermal.grid import build_grid, footprint
 from platewatch.thermal.plate import (
     Circle,
     Correlation,
+    Edge,
+    EdgeKind,
     Material,
     Plate,
     Rectangle,
+    Side,
     Surface,
     Table,
     Zone,
@@ -210,3 +215,16 @@ def test_the_time_constants_of_the_main_plate_are_the_published_ones():
     found = 1 / reduce(thin_plates.model_of(thin_plates.main_plate(), 0.01, 150.0)).rates[:3]
     assert found[0] == pytest.approx(1451.52, rel=1e-9)
     assert found[1:] == pytest.approx((202.137918, 121.079469), rel=1e-3)
+
+
+@pytest.mark.parametrize("held_degC", [22.0, 50.0, 90.0])
+def test_a_held_edge_warmer_than_the_room_costs_no_accuracy(held_degC: float) -> None:
+    """A cooled or heated frame is there before the heaters are: the plate starts at rest.
+
+    Measured from an even start, the step of the edge alone asked for 57 modes and still
+    was 2.6 K off.
+    """
+    edges = (Edge(EdgeKind.HELD, held=held_degC, side=Side.X_MAX),)
+    reduced = reduce(model_of(replace(aluminium_plate(), edges=edges)))
+    assert reduced.order <= 48
+    assert reduced.error_K <= 0.15
