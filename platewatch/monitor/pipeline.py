@@ -15,7 +15,7 @@ from platewatch.monitor import verdicts
 from platewatch.monitor.alarms import Condition
 from platewatch.monitor.annunciate import apply_actions, apply_conditions
 from platewatch.monitor.causes import layer, plain
-from platewatch.monitor.causes.settled import left_out, missed_now, without
+from platewatch.monitor.causes.settled import lasting_heat, left_out, missed_now, without
 from platewatch.monitor.causes.views import View
 from platewatch.monitor.conditions import Estimate
 from platewatch.monitor.control import integrals, loop_start
@@ -79,7 +79,8 @@ def step(monitor: Monitor, state: State, tick: Tick) -> tuple[State, Outcome]:
         if before is not None:
             showing = _showing(monitor, state)
             causes = layer.review_settled(monitor.causes, state.causes, before, everyone, showing)
-            state = replace(state, causes=causes)
+            lasting = lasting_heat(causes.settled, before.at_us)
+            state = replace(state, causes=causes, picture=replace(before, extra=lasting))
     state, gaps = _see(monitor, state, tick, seen)
     state = _plain(monitor, state, before, tick, everyone)
     state = _attend(monitor, state, before, tick, seen)

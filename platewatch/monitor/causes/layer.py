@@ -23,11 +23,10 @@ from platewatch.monitor.causes.evidence import (
     strongest,
 )
 from platewatch.monitor.causes.plain import Plain, verdict
-from platewatch.monitor.causes.refine import (
-    Fit,
-)
+from platewatch.monitor.causes.refine import FAMILY_OF, Fit
 from platewatch.monitor.causes.second_look import apart, second_look
 from platewatch.monitor.causes.settled import (
+    HEATING,
     adopt,
     left_out,
     left_out_but,
@@ -54,6 +53,7 @@ from platewatch.types import Array, Gaussian, Tick
 
 WARM_UP_US = 120_000_000  # the quiet filter finds its feet before the bank listens
 AFTERWARDS_US = 300_000_000  # the filter takes in a settled cause before the bank listens again
+SPREADS_US = 900_000_000  # longer where it left heat in the plate: that takes its time to spread
 UNLISTENED_US = 60_000_000  # and a thermocouple that is left out, if it lied by itself
 SUSPECT_LOG_ODDS = -2.0  # below this nothing is looked at twice
 STRIKING = 9.0  # nats of the best single hypothesis, below which none is looked at
@@ -192,7 +192,8 @@ def settle(model: Model, state: State, field_state: FieldState) -> tuple[State, 
     all_settled = (*state.settled, settled)
     ignored = left_out(all_settled, model.quiet)
     sensors = tuple(i for i in everyone if i not in ignored)
-    until_us = field_state.at_us + AFTERWARDS_US
+    heated = any(FAMILY_OF[cause] in HEATING for cause, _ in state.views[0].parts)
+    until_us = field_state.at_us + (SPREADS_US if heated else AFTERWARDS_US)
     return State(sensors, settled=all_settled, idle_until_us=until_us), moved
 
 

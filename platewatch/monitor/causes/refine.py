@@ -27,6 +27,8 @@ FEATURE_TICKS = 15.0
 SMOOTH_TICKS = 7
 SINGLE = 1e-5
 UNKNOWN_HEAT_SHARE = 0.2
+MOST_TRIED = 12  # variants of two causes together that are fitted with their signs
+MOST_MADE = 400
 Ints = NDArray[np.int64]
 
 
@@ -60,21 +62,39 @@ class Fit:
 
 def columns_of(bank: Bank, cause: Cause, subject: str, x_m: float, y_m: float) -> Ints:
     """All columns that one cause at one place may use."""
-    family = FAMILY_OF[cause]
-    scale = NEAR * bank.scale_m
-    chosen = []
-    for column, p in enumerate(bank.column_pattern):
-        pattern = bank.patterns[p]
-        if pattern.family is not family:
-            continue
-        if family is Family.SOURCE:
-            if np.hypot(pattern.x_m - x_m, pattern.y_m - y_m) <= scale:
-                chosen.append(column)
-        elif pattern.subject == subject and bank.column_shape[column].kind in KINDS.get(
-            cause, ALL_KINDS
-        ):
-            chosen.append(column)
-    return np.array(chosen, dtype=np.int64)
+    family, which = FAMILY_OF[cause], bank.column_pattern
+    if family is Family.SOURCE:
+        table = _source_places(bank)
+        near = np.hypot(table[:, 0] - x_m, table[:, 1] - y_m) <= NEAR * bank.scale_m
+        return np.asarray(np.flatnonzero(near[which]), dtype=np.int64)
+    key = ("columns", cause, subject)
+    if key not in bank.made:
+        kinds = KINDS.get(cause, ALL_KINDS)
+        bank.made[key] = np.array(
+            [
+                column
+                for column, p in enumerate(which)
+                if bank.patterns[p].family is family
+                and bank.patterns[p].subject == subject
+                and bank.column_shape[column].kind in kinds
+            ],
+            dtype=np.int64,
+        )
+    found: Ints = bank.made[key]  # type: ignore[assignment]
+    return found
+
+
+def _source_places(bank: Bank) -> Array:
+    """(P, 2) places of the sources, far away for all other patterns."""
+    if "places" not in bank.made:
+        bank.made["places"] = np.array(
+            [
+                (p.x_m, p.y_m) if p.family is Family.SOURCE else (np.inf, np.inf)
+                for p in bank.patterns
+            ]
+        )
+    found: Array = bank.made["places"]  # type: ignore[assignment]
+    return found
 
 
 FAMILY_OF = {
@@ -213,11 +233,11 @@ def fit(
     weigh, window = seen.weigh(age), seen.window(age)
     G = sd[:, None] * gram(bank, columns, age, weigh) * sd
     b = sd * correlation(bank, columns, age, weigh, window)
-    tried = [_posterior(G, b, T, signs) for T, signs in _variants(bank, parts, columns)]
+    tried, count = _best_of(G, b, *_variants(bank, parts, columns))
     evidence = np.array([t.evidence for t in tried])
     best = float(evidence.max())
     chance = np.exp(evidence - best)
-    total = best + float(np.log(chance.mean()))
+    total = best + float(np.log(chance.sum() / count))
     chance /= chance.sum()
     keep = np.flatnonzero(chance > 1e-3)
     amplitude = np.einsum("v,vc->c", chance[keep], np.array([tried[v].z for v in keep]))
@@ -258,10 +278,20 @@ class _Posterior:
     evidence: float
 
 
-def _variants(
+def _variants(bank: Bank, parts: Sequence[tuple[Cause, str]], columns: Ints) -> tuple[Array, Array]:
+    """Ways to combine the columns (v, c, k), and the sign (k,) each combination must have."""
+    key = ("variants", tuple(cause for cause, _ in parts), columns.tobytes())
+    if key not in bank.made:
+        if len(bank.made) > MOST_MADE:
+            bank.made.clear()
+        bank.made[key] = _made_variants(bank, parts, columns)
+    found: tuple[Array, Array] = bank.made[key]  # type: ignore[assignment]
+    return found
+
+
+def _made_variants(
     bank: Bank, parts: Sequence[tuple[Cause, str]], columns: Ints
-) -> list[tuple[Array, Array]]:
-    """Ways to combine the columns, (c, k) each, with the sign each combination must have."""
+) -> tuple[Array, Array]:
     which = bank.column_pattern[columns]
     families = [bank.patterns[p].family for p in which]
     cause_of = {FAMILY_OF[cause]: cause for cause, _ in parts}
@@ -271,16 +301,15 @@ def _variants(
     other_signs = np.array([SIGN.get(cause_of[families[i]], 0.0) for i in other])
     source = cause_of.get(Family.SOURCE)
     if source is None:
-        return [(rest, other_signs)]
-    found = []
-    for places in _places(bank, which):
-        T = np.zeros((columns.size, len(SOURCE_SHAPES)))
-        for p in places:
+        return rest[None], other_signs
+    places = _places(bank, which)
+    T = np.zeros((len(places), columns.size, len(SOURCE_SHAPES) + len(other)))
+    T[:, :, len(SOURCE_SHAPES) :] = rest
+    for v, members in enumerate(places):
+        for p in members:
             for i in np.flatnonzero(which == p):
-                T[i, SOURCE_SHAPES.index(bank.column_shape[columns[i]])] = 1 / len(places)
-        signs = np.append(np.full(len(SOURCE_SHAPES), SIGN[source]), other_signs)
-        found.append((np.column_stack((T, rest)), signs))
-    return found
+                T[v, i, SOURCE_SHAPES.index(bank.column_shape[columns[i]])] = 1 / len(members)
+    return T, np.append(np.full(len(SOURCE_SHAPES), SIGN[source]), other_signs)
 
 
 def _places(bank: Bank, which: Ints) -> list[tuple[int, ...]]:
@@ -296,11 +325,60 @@ def _places(bank: Bank, which: Ints) -> list[tuple[int, ...]]:
     return found
 
 
-def _posterior(G: Array, b: Array, T: Array, signs: Array) -> _Posterior:
-    """Amplitudes of one variant; those with a sign that would come out wrong stay at none."""
-    M, c = T.T @ G @ T, T.T @ b
+def _best_of(G: Array, b: Array, T: Array, signs: Array) -> tuple[list[_Posterior], int]:
+    """The variants that may matter, each with its amplitudes, and how many there were.
+
+    T (v, c, k)
+    """
+    M = T.transpose(0, 2, 1) @ (G @ T)
+    c = b @ T
+    index = np.arange(signs.size)
     # Signatures are kept in single precision: their rounding must not show as negative.
-    M[np.diag_indices(c.size)] += 1 + SINGLE * np.diag(M).max(initial=0.0)
+    M[:, index, index] += 1 + SINGLE * M[:, index, index].max(axis=1, initial=0.0)[:, None]
+    if signs.size <= len(SOURCE_SHAPES) and signs.all():
+        return _one_sided(M, c, T, signs), len(T)
+    lower = np.linalg.cholesky(M)
+    half = np.linalg.solve(lower, c[:, :, None])[:, :, 0]
+    bound = 0.5 * np.square(half).sum(axis=1) - np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(1)
+    leading = np.argsort(-bound, kind="stable")[:MOST_TRIED]
+    return [_posterior(M[v], c[v], T[v], signs) for v in leading], len(T)
+
+
+def _one_sided(M: Array, c: Array, T: Array, signs: Array) -> list[_Posterior]:
+    """All variants at once, every amplitude of its cause's sign.
+
+    Of all subsets of the combinations, the one whose own solution is positive and
+    explains most is the non-negative solution.
+    """
+    count, k = c.shape
+    M, c = signs[:, None] * M * signs, c * signs
+    quad = np.zeros(count)
+    evidence, z, root = np.zeros(count), np.zeros((count, k)), np.zeros((count, k, k))
+    for number in range(1, 2**k):
+        s = [i for i in range(k) if number >> i & 1]
+        lower = np.linalg.cholesky(M[:, s][:, :, s])
+        half = np.linalg.solve(lower, c[:, s, None])
+        x = np.linalg.solve(lower.transpose(0, 2, 1), half)[:, :, 0]
+        explained = np.square(half).sum(axis=(1, 2))
+        better = (x > 0).all(axis=1) & (explained > quad)
+        if not better.any():
+            continue
+        quad[better] = explained[better]
+        log_det = np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1)
+        evidence[better] = (0.5 * explained - log_det)[better]
+        z[better] = 0.0
+        z[np.ix_(np.flatnonzero(better), np.array(s))] = x[better]
+        inverse = np.linalg.inv(lower[better]).transpose(0, 2, 1)
+        root[better] = 0.0
+        root[np.ix_(np.flatnonzero(better), np.array(s), np.arange(len(s)))] = inverse
+    return [
+        _Posterior(T[v] @ (signs * z[v]), T[v] @ (signs[:, None] * root[v]), float(evidence[v]))
+        for v in range(count)
+    ]
+
+
+def _posterior(M: Array, c: Array, T: Array, signs: Array) -> _Posterior:
+    """Amplitudes of one variant; those with a sign that would come out wrong stay at none."""
     active = _same_sign(M, c, signs) if signs.any() else np.arange(c.size)
     z, root = np.zeros(c.size), np.zeros((c.size, c.size))
     if active.size == 0:

@@ -19,11 +19,13 @@ from platewatch.monitor.estimator import FieldState, Observed, Quiet
 from platewatch.types import Array, Gaussian
 
 DOUBT = 0.2  # share of the change that may be wrong
+MOST_SHIFT_K = 20.0
 LEFT_OVER_K = 1.0  # and this much anywhere
 SPREAD_S = 900.0  # what the modes miss of heat that has ended fades like this
 HEATING = (Family.SOURCE, Family.LOSS, Family.ZONE)
 RETURN_SD = 3.0  # a left-out thermocouple is heard again when it agrees this well
 RETURN_US = 180_000_000  # for this long
+LOAD_WARMS_S = 600.0  # what a load still takes when it has settled fades like this
 OVER_SHARE = 0.1  # of a zone's watts: below this a settled heater fault is over
 OVER_US = 1_800_000_000  # loads and losses are part of the plate after this long
 
@@ -53,14 +55,28 @@ def adopt(field: FieldState, view: View, quiet: Quiet) -> tuple[FieldState, Sett
     """The field as the cause sees it, its lasting heat known from now on."""
     k = quiet.blocks
     mean = view.belief.mean.copy()
-    extra = np.zeros(k.modes) if field.extra is None else field.extra
-    if any(FAMILY_OF[cause] in HEATING for cause, _ in view.parts):
-        extra = extra + view.lasting
     change = mean - field.belief.mean
     cov = view.belief.cov + (DOUBT**2) * np.outer(change, change)
-    cov[k.a, k.a] += LEFT_OVER_K**2 * np.eye(k.modes) * mean_square_mode(quiet)
-    moved = replace(field, belief=Gaussian(mean, cov), misfit=1.0, extra=extra)
+    shift = float(np.square(change[k.a]).sum()) / k.modes / mean_square_mode(quiet)
+    anywhere = LEFT_OVER_K**2 + DOUBT**2 * min(shift, MOST_SHIFT_K**2)
+    cov[k.a, k.a] += anywhere * np.eye(k.modes) * mean_square_mode(quiet)
+    moved = replace(field, belief=Gaussian(mean, cov), misfit=1.0)
     return moved, Settled(view, field.at_us)
+
+
+def lasts(each: Settled, at_us: int) -> float:
+    """Share of a settled cause's lasting heat that still flows: a load warms, a fault stays."""
+    if each.view.cause is not Cause.COLD_LOAD:
+        return 1.0
+    return float(np.exp(-(at_us - each.since_us) / 1e6 / LOAD_WARMS_S))
+
+
+def lasting_heat(settled: Sequence[Settled], at_us: int) -> Array | None:
+    """(r,) modal watts of all settled heat, None where there is none."""
+    heating = [s for s in settled if any(FAMILY_OF[c] in HEATING for c, _ in s.view.parts)]
+    if not heating:
+        return None
+    return np.asarray(sum(lasts(each, at_us) * each.view.lasting for each in heating))
 
 
 def missed_now(settled: Sequence[Settled], at_us: int) -> Array | None:
@@ -70,8 +86,10 @@ def missed_now(settled: Sequence[Settled], at_us: int) -> Array | None:
         if FAMILY_OF[each.view.cause] not in HEATING or not each.view.missed.any():
             continue
         gone_s = (at_us - each.since_us) / 1e6
-        share = each.view.lasting_share
-        part = each.view.missed * (share + (1 - share) * float(np.exp(-gone_s / SPREAD_S)))
+        share = each.view.lasting_share * lasts(each, at_us)
+        part = each.view.missed * (
+            share + (1 - each.view.lasting_share) * float(np.exp(-gone_s / SPREAD_S))
+        )
         total = part if total is None else total + part
     return total
 

@@ -7,7 +7,7 @@ e = e' - K s.  What the filter's modes miss of a source comes from the fuller mo
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -53,6 +53,7 @@ class Bank:
     signature (ages, M, m): whitened innovations per unit amplitude
     energy (ages, M): their squares, summed up to each age;  scale_m: sqrt of the plate's area
     root (m, m): turns whitened innovations back into K
+    made: what follows from the columns and is asked for again and again
     """
 
     patterns: tuple[Pattern, ...]
@@ -63,6 +64,7 @@ class Bank:
     push: Push
     root: Array
     scale_m: float
+    made: dict[object, object] = field(default_factory=dict, compare=False, repr=False)
 
     @property
     def ages(self) -> int:

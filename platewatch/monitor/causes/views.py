@@ -17,6 +17,7 @@ from platewatch.types import Array, Gaussian
 
 MISMATCH = 0.1  # relative: what a fitted response still gets wrong
 SETTLE_AHEAD_S = 120.0
+DIRECTIONS = 6  # of the uncertainty of a fit that are followed
 
 
 @dataclass(frozen=True)
@@ -134,7 +135,7 @@ def build_views(
             View(
                 parts=f.parts,
                 probability=p,
-                belief=Gaussian(full, _spread(quiet, sentinel, field, f, e)),
+                belief=Gaussian(full, _spread(quiet, sentinel, bank, field, f, e)),
                 missed=missed,
                 heat_ahead=_heat_ahead(quiet, bank, f, times_s),
                 reading_error=_error_ahead(quiet, sentinel, bank, f),
@@ -149,15 +150,37 @@ def build_views(
     return tuple(views)
 
 
-def _spread(quiet: Quiet, sentinel: Sentinel, field: FieldState, f: Fit, e: Array) -> Array:
+def directions(sentinel: Sentinel, bank: Bank, f: Fit) -> Array:
+    """(n, q) a root of what the uncertain size, place and course of a cause make of the
+    state: the leading directions of the fit's covariance, each followed from the onset."""
+    push, which = bank.push, bank.column_pattern[f.columns]
+    left, size, _ = np.linalg.svd(f.spread, full_matrices=False)
+    root = (left * size)[:, :DIRECTIONS]
+    shapes = sorted({bank.column_shape[c] for c in f.columns}, key=lambda s: (s.kind, s.s))
+    mine = [[i for i, c in enumerate(f.columns) if bank.column_shape[c] == s] for s in shapes]
+    values = _shape_values(bank, f.columns, f.age + 1)[:, [m[0] for m in mine]]
+    state = np.array([push.state[:, which[m]] @ root[m] for m in mine])
+    error = np.array([push.error[:, which[m]] @ root[m] for m in mine])
+    keep = np.eye(len(sentinel.F)) - sentinel.K @ sentinel.H
+    F, (count, n, q) = keep @ sentinel.F, state.shape
+    pushed = keep @ state - sentinel.K @ error
+    pushes = (values @ pushed.reshape(count, -1)).reshape(-1, n, q)
+    E = np.zeros((n, q))
+    for heat in pushes:
+        E = F @ E + heat
+    return E
+
+
+def _spread(
+    quiet: Quiet, sentinel: Sentinel, bank: Bank, field: FieldState, f: Fit, e: Array
+) -> Array:
     """Covariance: the observer's, the parameters', and how well the cause is known."""
     k, n = quiet.blocks, len(sentinel.F)
     cov = np.zeros((k.size, k.size))
     cov[:n, :n] = sentinel.cov
     cov[k.theta, k.theta] = field.belief.cov[k.theta, k.theta]
-    total = float(f.amplitude @ f.amplitude) or 1.0
-    unsure = float(np.square(f.amplitude @ f.spread).sum()) / total**2
-    cov[:n, :n] += (min(unsure, 1.0) + MISMATCH**2) * np.outer(e, e)
+    D = directions(sentinel, bank, f)
+    cov[:n, :n] += D @ D.T + MISMATCH**2 * np.outer(e, e)
     return cov
 
 

@@ -1,0 +1,1 @@
+"""Scores of the named causes on simulated plants with drawn errors, beside other methods."""
