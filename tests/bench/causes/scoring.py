@@ -14,7 +14,8 @@ from platewatch.monitor.outlook import Prospect, now_of, present
 from platewatch.monitor.peak import WHOLE_PLATE, hottest_now
 from platewatch.monitor.pipeline import Monitor, State
 from platewatch.types import Array
-from tests.bench.accuracy.interpolation import interpolators
+from sim_sensors.simulation import TrueState
+from tests.bench.accuracy.interpolation import Interpolator, interpolators
 from tests.bench.accuracy.plants import extent_m
 from tests.bench.accuracy.watching import ANNUNCIATED, Watch, _tick_of, places
 from tests.bench.causes.scenarios import READING, Event
@@ -150,14 +151,14 @@ class Score:
         wanted, subjects = self.event.causes, self.event.subjects
         return any(c in wanted and (not subjects or s in subjects) for c, s in p.view.parts)
 
-    def _glance(self, truth: object, since: float, compare: dict) -> Glance:  # type: ignore[type-arg]
+    def _glance(self, truth: TrueState, since: float, compare: dict[str, Interpolator]) -> Glance:
         watch, state = self.watch, self.watch.state
         monitor = watch.monitor
         assert watch._to_cells is not None
         assert state.ahead is not None
         assert state.picture is not None
-        true = watch._to_cells @ truth.field  # type: ignore[attr-defined]
-        top = truth.peak_degC  # type: ignore[attr-defined]
+        true = watch._to_cells @ truth.field
+        top = truth.peak_degC
         q, belief = monitor.quiet, state.picture.belief
         plain = q.reduced.V @ belief.mean[q.blocks.a]
         fields = {OURS: mean_field(monitor, state), QUIET: plain}

@@ -36,9 +36,16 @@ def field_table(runs: Sequence[Scored]) -> str:
         others = {m: v for m, v in by.items() if m not in (OURS, QUIET)}
         best = min(others, key=lambda m: others[m])
         rows.append(
-            [scenario, plate, f"{len(some)}", f"{by[OURS]:.2f}", f"{by[QUIET]:.2f}"]
-            + [f"{by[OURS] / by[QUIET]:.2f}", f"{best} {by[best]:.2f}"]
-            + [f"{by[OURS] / by[best]:.2f}"]
+            [
+                scenario,
+                plate,
+                f"{len(some)}",
+                f"{by[OURS]:.2f}",
+                f"{by[QUIET]:.2f}",
+                f"{by[OURS] / by[QUIET]:.2f}",
+                f"{best} {by[best]:.2f}",
+                f"{by[OURS] / by[best]:.2f}",
+            ]
         )
     return table(head, rows)
 
@@ -98,11 +105,16 @@ def cause_table(runs: Sequence[Scored]) -> str:
         wrong = Counter(cause for r in some for cause in {c for c, _ in r.false})
         raised = Counter(a for r in some for a in set(r.alarms))
         rows.append(
-            [scenario, plate, f"{len(some)}"]
-            + [_median([r.suspected_s for r in some]), _median([r.named_s for r in some])]
-            + chances
-            + [", ".join(f"{c} x{n}" for c, n in wrong.items()) or "none"]
-            + [f"{sum(raised.values()) / len(some):.1f} a run"]
+            [
+                scenario,
+                plate,
+                f"{len(some)}",
+                _median([r.suspected_s for r in some]),
+                _median([r.named_s for r in some]),
+                *chances,
+                ", ".join(f"{c} x{n}" for c, n in wrong.items()) or "none",
+                f"{sum(raised.values()) / len(some):.1f} a run",
+            ]
         )
     return table(head, rows)
 
@@ -124,8 +136,15 @@ def lead_table(runs: Sequence[Scored]) -> str:
         ]
         announced = sum(v > 0 for v in lead)
         rows.append(
-            [scenario, plate, f"{len(crossed)}", f"{announced}", _median(lead)]
-            + [f"{min(lead):.0f}" if lead else "–", _median(over)]
+            [
+                scenario,
+                plate,
+                f"{len(crossed)}",
+                f"{announced}",
+                _median(lead),
+                f"{min(lead):.0f}" if lead else "–",
+                _median(over),
+            ]
         )
     return table(head, rows)
 
