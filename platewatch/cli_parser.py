@@ -99,6 +99,11 @@ def _json(parser: Parser) -> None:
     parser.add_argument("--json", action="store_true", help="print the result as JSON")
 
 
+def _record(parser: Parser, *, needed: bool = True) -> None:
+    which = "the record" if needed else "the record, instead of that of PLATE.toml"
+    parser.add_argument("--db", metavar="FILE", required=needed, default="", help=which)
+
+
 def _times(parser: Parser) -> None:
     parser.add_argument(
         "--from", dest="from_time", metavar="ISO", default="", help="first moment, with offset"
@@ -152,9 +157,16 @@ def _demo(commands: Commands) -> None:
     parser.add_argument(
         "--for", dest="for_s", type=float, metavar="SECONDS", help="length, in your seconds"
     )
-    parser.add_argument("--data", metavar="DIR", default="platewatch-demo-data")
+    parser.add_argument(
+        "--data",
+        metavar="DIR",
+        default="platewatch-demo-data",
+        help="folder of its record (default %(default)s)",
+    )
     parser.add_argument("--port", type=int, default=0, help="port of the broker; 0: any free one")
-    parser.add_argument("--no-screen", action="store_true", help="only lines, no live page")
+    parser.add_argument(
+        "--no-screen", action="store_true", help="only lines; there is no live page yet"
+    )
 
 
 def _replay(commands: Commands) -> None:
@@ -228,11 +240,11 @@ def _alarms(commands: Commands) -> None:
         nargs="*",
         help="whose record, or what to acknowledge",
     )
-    parser.add_argument("--db", metavar="FILE", default="")
+    _record(parser, needed=False)
     parser.add_argument("--plate", metavar="NAME", default="", help="where a record holds several")
     parser.add_argument("--all", action="store_true", help="those that are over, too")
     parser.add_argument("--person", default="", help="who acknowledges")
-    parser.add_argument("--reason", default="")
+    parser.add_argument("--reason", default="", help="why, kept in the record")
     _json(parser)
 
 
@@ -245,10 +257,10 @@ def _answer(commands: Commands) -> None:
     )
     parser.add_argument("plate_file", metavar="PLATE.toml", nargs="?", default="")
     parser.add_argument("said", choices=("yes", "no", "withdraw"))
-    parser.add_argument("--db", metavar="FILE", default="")
+    _record(parser, needed=False)
     parser.add_argument("--plate", metavar="NAME", default="", help="where a record holds several")
     parser.add_argument("--person", default="", help="who answers")
-    parser.add_argument("--reason", default="")
+    parser.add_argument("--reason", default="", help="why, kept in the record")
 
 
 def _export(commands: Commands) -> None:
@@ -263,7 +275,7 @@ def _export(commands: Commands) -> None:
         choices=("readings", "peaks", "alarms", "field"),
         help="readings: those that were used, as a wide log that replay takes",
     )
-    parser.add_argument("--db", metavar="FILE", required=True)
+    _record(parser)
     parser.add_argument("--out", metavar="FILE", required=True, help="ends in .csv or .parquet")
     _times(parser)
     parser.add_argument("--plate", metavar="NAME", default="", help="where a record holds several")
@@ -283,7 +295,7 @@ def _verify(commands: Commands) -> None:
         "check a record: file, hash chains, descriptions; ends with 1 on a finding",
         "verify --db table-1.sqlite",
     )
-    parser.add_argument("--db", metavar="FILE", required=True)
+    _record(parser)
     _json(parser)
 
 
@@ -294,8 +306,8 @@ def _backup(commands: Commands) -> None:
         "copy a record while a daemon writes to it",
         "backup --db table-1.sqlite --to copy.sqlite",
     )
-    parser.add_argument("--db", metavar="FILE", required=True)
-    parser.add_argument("--to", metavar="FILE", required=True)
+    _record(parser)
+    parser.add_argument("--to", metavar="FILE", required=True, help="the copy, a new file")
 
 
 def _tidy(commands: Commands) -> None:
@@ -305,9 +317,21 @@ def _tidy(commands: Commands) -> None:
         "remove what is past its keeping time and give the room back",
         "tidy --db table-1.sqlite --keep-readings-days 90 --keep-days 400",
     )
-    parser.add_argument("--db", metavar="FILE", required=True)
-    parser.add_argument("--keep-readings-days", type=float, default=90.0)
-    parser.add_argument("--keep-days", type=float, default=400.0)
+    _record(parser)
+    parser.add_argument(
+        "--keep-readings-days",
+        type=float,
+        metavar="DAYS",
+        default=90.0,
+        help="of readings, powers and fields (default %(default)g)",
+    )
+    parser.add_argument(
+        "--keep-days",
+        type=float,
+        metavar="DAYS",
+        default=400.0,
+        help="of peaks and alarms (default %(default)g)",
+    )
     _json(parser)
 
 

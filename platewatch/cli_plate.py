@@ -12,7 +12,14 @@ from platewatch import compose_plate as compose
 from platewatch import compose_study as study
 from platewatch.cli_parser import WHATIF_CAUTION
 from platewatch.errors import SettingsError, StorageError
-from platewatch.units import TemperatureUnit, from_degC, to_degC
+from platewatch.units import (
+    SIGN,
+    TemperatureUnit,
+    plausible,
+    to_degC,
+    written,
+    written_difference,
+)
 
 
 def check(arguments: Namespace) -> int:
@@ -37,14 +44,21 @@ class Degrees:
 
     def __init__(self, unit: TemperatureUnit) -> None:
         self._unit = unit
-        self.sign = {"degC": "°C", "degF": "°F", "K": "K"}[unit]
 
     def text(self, degC: float) -> str:
-        return f"{from_degC(degC, self._unit):.1f} {self.sign}"
+        return written(degC, self._unit)
+
+    def difference(self, kelvin: float, digits: int = 1) -> str:
+        return written_difference(kelvin, self._unit, digits)
 
     def read(self, option: str, text: str) -> float:
-        """degC; raises SettingsError for what is no number."""
-        return to_degC(_number(option, text), self._unit)
+        """degC; raises SettingsError for what is no temperature."""
+        value = _number(option, text)
+        if not plausible(value, self._unit):
+            raise SettingsError(
+                f"{option}: {text} {SIGN[self._unit]} is no temperature of a room or a plate"
+            )
+        return to_degC(value, self._unit)
 
 
 def _fact_lines(facts: study.Facts, degrees: Degrees) -> list[str]:
@@ -62,8 +76,8 @@ def _fact_lines(facts: study.Facts, degrees: Degrees) -> list[str]:
     slow = "it loses no heat" if facts.slow_s is None else _duration(facts.slow_s)
     lines += [
         f"time constants    {slow} as a whole, {_duration(facts.even_s)} from place to place",
-        f"reduced model     {facts.order} modes, at most {facts.error_K:.2f} K off the full model "
-        "over a heat-up",
+        f"reduced model     {facts.order} modes, at most {degrees.difference(facts.error_K, 2)} "
+        "off the full model over a heat-up",
         f"heaters           {facts.watts:.0f} W in all",
     ]
     if isinstance(facts.full_power_degC, str):
@@ -78,7 +92,7 @@ def _fact_lines(facts: study.Facts, degrees: Degrees) -> list[str]:
         names = ", ".join(zone.sensors) or "none"
         lines.append(
             f"zone {zone.zone:12s} thermocouples in reach: {names}; hottest place known to "
-            f"± {1.96 * zone.sd_K:.1f} K (95 %) in a steady hold"
+            f"± {degrees.difference(1.96 * zone.sd_K)} (95 %) in a steady hold"
         )
     return [*lines, *(f"warning: {text}" for text in facts.warnings)]
 
@@ -92,9 +106,15 @@ def whatif(arguments: Namespace) -> int:
     description = compose.describe(Path(arguments.plate))
     degrees = Degrees(description.unit)
     places = [_place(text) for text in arguments.at]
+    powers = _powers(arguments.power)
+    if sum(powers.values()) < 0:
+        raise SettingsError(
+            f"--power: {sum(powers.values()):g} W in all would cool the plate, which no heater "
+            "does; give watts above 0"
+        )
     found = study.what_if(
         description,
-        dict(_power(text) for text in arguments.power),
+        powers,
         _ambients(arguments.ambient, description, degrees),
         tuple(arguments.load),
         arguments.after,
@@ -119,6 +139,8 @@ def whatif(arguments: Namespace) -> int:
         f"heat: {energy.entered:.4g} {unit} in, {energy.stored:.4g} {unit} stored, "
         f"{energy.lost:.4g} {unit} lost"
     )
+    for line in _power_notes(description, powers):
+        print(line)
     if arguments.picture:
         print(f"picture in {arguments.picture}")
     print(WHATIF_CAUTION)
@@ -140,6 +162,28 @@ def _power(text: str) -> tuple[str, float]:
     if not separator or not zone:
         raise SettingsError(f"--power {text!r} is not ZONE=W; write --power Z1=300")
     return zone, _number("--power", watts)
+
+
+def _powers(given: list[str]) -> dict[str, float]:
+    """W by zone, each named once."""
+    powers: dict[str, float] = {}
+    for zone, watts in map(_power, given):
+        if zone in powers:
+            raise SettingsError(f"--power: zone {zone} is named twice; give each zone once")
+        powers[zone] = watts
+    return powers
+
+
+def _power_notes(description: compose.Description, powers: dict[str, float]) -> list[str]:
+    """What a person should see of powers that no heater of this plate gives."""
+    notes = []
+    for name, watts in powers.items():
+        zone = description.plate.zone(name)
+        if watts > zone.watts:
+            notes.append(f"note: zone {name} is rated {zone.watts:g} W, not {watts:g} W")
+        elif watts < 0:
+            notes.append(f"note: zone {name} takes {-watts:g} W away, which no heater does")
+    return notes
 
 
 def _ambients(
@@ -172,6 +216,8 @@ def _place(text: str) -> tuple[float, float]:
 def _write_picture(path: Path, svg: str) -> None:
     if path.suffix.lower() != ".svg":
         raise SettingsError(f"--picture {path}: only SVG can be drawn; give a name in .svg")
+    if not path.parent.is_dir():
+        raise StorageError(f"{path}: folder {path.parent} does not exist; create it first")
     try:
         path.write_text(svg, encoding="utf-8")
     except OSError as error:

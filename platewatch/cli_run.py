@@ -19,6 +19,7 @@ from platewatch.clock import SystemClock
 from platewatch.daemon import run_daemon
 from platewatch.daemon_words import open_log
 from platewatch.errors import SettingsError
+from platewatch.units import TemperatureUnit
 
 
 def run(arguments: Namespace) -> int:
@@ -127,5 +128,6 @@ def replay(arguments: Namespace) -> int:
     if arguments.json:
         print(json.dumps(summary.as_dict() | found, indent=2))
     else:
-        print("\n".join([replay_summary(summary), *lines]))
+        unit = TemperatureUnit(description.unit)
+        print("\n".join([replay_summary(summary, unit), *lines]))
     return 1 if summary.raised else 0

@@ -8,7 +8,7 @@ from typing import TextIO
 
 from platewatch.errors import SettingsError
 from platewatch.replay import Summary
-from platewatch.units import from_iso, iso
+from platewatch.units import TemperatureUnit, from_iso, iso, written, written_difference
 
 MOST_ALARMS_LISTED = 30
 
@@ -42,7 +42,7 @@ def row_progress(stream: TextIO) -> Iterator[Callable[[int, int], None]]:
         yield lambda done, whole: bar.update(task, completed=done, total=max(whole, 1))
 
 
-def replay_summary(summary: Summary) -> str:
+def replay_summary(summary: Summary, unit: TemperatureUnit = TemperatureUnit.DEGC) -> str:
     """The closing lines of a replay."""
     lines = [
         f"{summary.rows} rows, {summary.ticks} ticks; {summary.stored} readings stored, "
@@ -56,7 +56,8 @@ def replay_summary(summary: Summary) -> str:
         place = f"x {row.now_x_mm:.0f} mm, y {row.now_y_mm:.0f} mm"
         zone = f"zone {row.now_zone}, " if row.now_zone else ""
         lines.append(
-            f"hottest place {row.now_degC:.1f} °C ± {1.96 * row.now_sd_K:.1f} K (inferred) "
+            f"hottest place {written(row.now_degC, unit)} ± "
+            f"{written_difference(1.96 * row.now_sd_K, unit)} (inferred) "
             f"at {iso(row.at_us)}, {zone}{place}"
         )
     if not summary.raised:

@@ -47,6 +47,20 @@ def difference_from_K(value_K: float, unit: TemperatureUnit) -> float:
     return value_K * 1.8 if unit is TemperatureUnit.DEGF else value_K
 
 
+SIGN = {TemperatureUnit.DEGC: "°C", TemperatureUnit.DEGF: "°F", TemperatureUnit.K: "K"}
+
+
+def written(value_degC: float, unit: TemperatureUnit) -> str:
+    """A temperature for a person, in the plate's own unit."""
+    return f"{from_degC(value_degC, unit):.1f} {SIGN[unit]}"
+
+
+def written_difference(value_K: float, unit: TemperatureUnit, digits: int = 1) -> str:
+    """A difference for a person: degrees Fahrenheit of difference, else kelvin."""
+    sign = SIGN[unit] if unit is TemperatureUnit.DEGF else "K"
+    return f"{difference_from_K(value_K, unit):.{digits}f} {sign}"
+
+
 def iso(at_us: int) -> str:
     """Integer microseconds UTC as ISO 8601 with a Z."""
     seconds, micros = divmod(at_us, 1_000_000)

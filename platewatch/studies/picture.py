@@ -12,17 +12,16 @@ from numpy.typing import NDArray
 from platewatch.studies.picture_frame import (
     LETTER_PX,
     MARGIN_PX,
-    SIGN,
     Frame,
     clamps,
     drawing,
     sensors,
-    written,
+    text_at,
     zones,
 )
 from platewatch.studies.whatif import CAUTION, WhatIf
 from platewatch.types import Array
-from platewatch.units import TemperatureUnit, from_degC
+from platewatch.units import TemperatureUnit, written
 
 # Cividis (Nunez, Anderton & Renslow 2018), ten even steps, from memory: perceptually even,
 # the same to colour-blind readers and in grey.
@@ -60,7 +59,7 @@ def svg_picture(
     notes = [*CAUTION.replace(". ", ".\n", 1).split("\n"), *_standpoint(result)]
     foot = frame.top + frame.height + 1.5 * MARGIN_PX
     parts = [
-        written(MARGIN_PX, MARGIN_PX - 6, title),
+        text_at(MARGIN_PX, MARGIN_PX - 6, title),
         f'<clipPath id="plate"><path clip-rule="evenodd" d="{outline}"/></clipPath>',
         _field(result, frame, low, high),
         f'<path d="{outline}" fill="none" stroke="#000" stroke-width="2"/>',
@@ -69,7 +68,7 @@ def svg_picture(
         *sensors(result.plate, frame),
         _hottest(result, frame),
         *_scale_bar(frame.left + frame.width + MARGIN_PX, frame, low, high, unit),
-        *(written(MARGIN_PX, foot + 20 * n, note) for n, note in enumerate(notes)),
+        *(text_at(MARGIN_PX, foot + 20 * n, note) for n, note in enumerate(notes)),
     ]
     width = max(frame.width + BAR_PX + 2 * MARGIN_PX, LETTER_PX * len(title) + 2 * MARGIN_PX)
     return drawing(width, foot + 20 * len(notes), title, parts)
@@ -83,14 +82,10 @@ def _standpoint(result: WhatIf) -> list[str]:
 def _title(result: WhatIf, unit: TemperatureUnit) -> str:
     when = "steady" if result.after_s is None else f"after {result.after_s:g} s"
     return (
-        f"{result.plate.name}, {when}: hottest {_degrees(result.hottest_degC, unit)} at "
+        f"{result.plate.name}, {when}: hottest {written(result.hottest_degC, unit)} at "
         f"{1e3 * result.hottest_x_m:.0f}, {1e3 * result.hottest_y_m:.0f} mm, "
-        f"mean {_degrees(result.mean_degC, unit)} (calculated)"
+        f"mean {written(result.mean_degC, unit)} (calculated)"
     )
-
-
-def _degrees(degC: float, unit: TemperatureUnit) -> str:
-    return f"{from_degC(degC, unit):.1f} {SIGN[unit]}"
 
 
 def _field(result: WhatIf, frame: Frame, low: float, high: float) -> str:
@@ -150,5 +145,5 @@ def _scale_bar(x: float, frame: Frame, low: float, high: float, unit: Temperatur
     for part in np.linspace(0, 1, 6):
         y = frame.top + float(1 - part) * frame.height
         parts.append(f'<path d="M{x + 22:.1f} {y:.1f}h6" stroke="#000"/>')
-        parts.append(written(x + 32, y + 5, _degrees(float(low + part * (high - low)), unit)))
+        parts.append(text_at(x + 32, y + 5, written(float(low + part * (high - low)), unit)))
     return parts

@@ -9,12 +9,10 @@ import shapely
 
 from platewatch.thermal.plate import Plate, geometry
 from platewatch.types import Array
-from platewatch.units import TemperatureUnit
 
 WIDTH_PX = 720.0  # of the longer side of the plate
 MARGIN_PX = 24.0
 LETTER_PX = 7.2  # of a letter of 14 px, on average
-SIGN = {TemperatureUnit.DEGC: "°C", TemperatureUnit.DEGF: "°F", TemperatureUnit.K: "K"}
 
 
 class Frame:
@@ -56,7 +54,7 @@ def drawing(width: float, height: float, title: str, parts: list[str]) -> str:
     )
 
 
-def written(x: float, y: float, text: str, anchor: str = "start") -> str:
+def text_at(x: float, y: float, text: str, anchor: str = "start") -> str:
     return f'<text x="{x:.1f}" y="{y:.1f}" text-anchor="{anchor}">{escape(text)}</text>'
 
 

@@ -15,7 +15,7 @@ from platewatch.studies.picture_frame import (
     drawing,
     label,
     sensors,
-    written,
+    text_at,
     zones,
 )
 from platewatch.thermal.grid import Grid
@@ -50,7 +50,7 @@ def plate_picture(plate: Plate, grid: Grid) -> str:
     below = foot + LINE_PX * (len(legend) + 0.5)
     parts = [
         *_patterns(),
-        written(MARGIN_PX, MARGIN_PX, title),
+        text_at(MARGIN_PX, MARGIN_PX, title),
         f'<path d="{frame.path(grid.domain)}" fill="#f2f2ee" fill-rule="evenodd"/>',
         *_insets(plate, frame),
         *zones(plate, frame, "#00204d"),
@@ -60,7 +60,7 @@ def plate_picture(plate: Plate, grid: Grid) -> str:
         *sensors(plate, frame),
         *_axes(grid, frame),
         *legend,
-        *(written(frame.left, below + LINE_PX * n, note) for n, note in enumerate(notes)),
+        *(text_at(frame.left, below + LINE_PX * n, note) for n, note in enumerate(notes)),
     ]
     longest = max(len(text) for text in (title, *notes, *EDGE_WORDS.values()))
     width = max(frame.left + frame.width + 3 * MARGIN_PX, frame.left + LETTER_PX * longest)
@@ -140,15 +140,15 @@ def _axes(grid: Grid, frame: Frame) -> list[str]:
     for mm in _marks(left, right, step):
         x, _ = frame.xy(mm / 1e3, 0.0)
         parts.append(f'<path d="M{x:.1f} {base + 8:.1f}v6" stroke="#000"/>')
-        parts.append(written(x, base + 29, f"{mm:g}", "middle"))
+        parts.append(text_at(x, base + 29, f"{mm:g}", "middle"))
     for mm in _marks(bottom, top, step):
         _, y = frame.xy(0.0, mm / 1e3)
         parts.append(f'<path d="M{frame.left - 8:.1f} {y:.1f}h-6" stroke="#000"/>')
-        parts.append(written(frame.left - 18, y + 5, f"{mm:g}", "end"))
+        parts.append(text_at(frame.left - 18, y + 5, f"{mm:g}", "end"))
     return [
         *parts,
-        written(frame.left + frame.width + 26, base + 29, "x →"),
-        written(frame.left - 18, frame.top - 16, "y ↑", "end"),
+        text_at(frame.left + frame.width + 26, base + 29, "x →"),
+        text_at(frame.left - 18, frame.top - 16, "y ↑", "end"),
     ]
 
 

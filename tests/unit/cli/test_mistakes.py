@@ -202,6 +202,37 @@ MISTAKES: dict[str, tuple[Words, int, tuple[str, ...]]] = {
         2,
         ("lots", "no number"),
     ),
+    "power that is not a number": (lambda d, p, r: ["whatif", p, "--power", "Z1=nan"], 2, ("nan",)),
+    "power that cools": (
+        lambda d, p, r: ["whatif", p, "--power", "Z1=-300"],
+        2,
+        ("-300 W", "no heater"),
+    ),
+    "one zone twice": (
+        lambda d, p, r: ["whatif", p, "--power", "Z1=300", "--power", "Z1=200"],
+        2,
+        ("Z1", "twice"),
+    ),
+    "room below absolute zero": (
+        lambda d, p, r: ["whatif", p, "--power", "Z1=300", "--ambient", "-400"],
+        2,
+        ("-400 °C", "no temperature"),
+    ),
+    "picture into a missing folder": (
+        lambda d, p, r: ["whatif", p, "--picture", str(d / "no" / "x.svg")],
+        4,
+        ("does not exist",),
+    ),
+    "drawing into a missing folder": (
+        lambda d, p, r: ["check", p, "--picture", str(d / "no" / "x.svg")],
+        4,
+        ("does not exist",),
+    ),
+    "picture of another kind": (
+        lambda d, p, r: ["check", p, "--picture", str(d / "x.png")],
+        2,
+        ("x.png", ".svg"),
+    ),
     "place off the plate": (
         lambda d, p, r: ["whatif", p, "--power", "Z1=300", "--at", "9000,1"],
         2,
