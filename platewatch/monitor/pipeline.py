@@ -191,7 +191,8 @@ def _plain(
         return state
     known = state.plain or plain.begin(monitor.quiet)
     junctions, off = state.heard.junctions, model.options.off
-    now = plain.watch(monitor.quiet, known, tick.at_us, everyone, before, junctions, off)
+    at_us, dt_us = tick.at_us, tick.dt_us
+    now = plain.watch(monitor.quiet, known, at_us, dt_us, everyone, before, junctions, off)
     state = replace(state, plain=now)
     if not now.found or state.picture is None:
         return state

@@ -60,6 +60,8 @@ def _part(words: Words, prospect: Prospect, cause: Cause, subject: str) -> str:
             return f"the plate loses {'less' if view.watts > 0 else 'more'} heat ({subject})"
         case Cause.SENSOR_STUCK:
             return f"the reading of {subject} stands still"
+        case Cause.SENSOR_NOISY:
+            return f"the reading of {subject} jumps about"
         case Cause.SENSOR_REVERSED:
             return f"{subject} falls where the plate warms (wires reversed)"
         case Cause.JUNCTION_BLOCK:

@@ -1,4 +1,4 @@
-"""Faults that a reading shows by itself: it stands still, or it is a mirror image.
+"""Faults that a reading shows by itself: it stands still, jumps, or is a mirror image.
 
 No field and no other cause is needed to tell them, so they are watched from the first
 reading on, also before the bank listens.
@@ -13,35 +13,38 @@ import numpy as np
 
 from platewatch.monitor.causes.catalogue import Cause
 from platewatch.monitor.causes.frozen import Still, frozen, listen, nothing_still
+from platewatch.monitor.causes.jumped import Levels, compare, no_levels
 from platewatch.monitor.causes.mirrored import Mirrors, look, mirrored, no_mirrors
+from platewatch.monitor.causes.noisy import Jumps, follow, no_jumps
 from platewatch.monitor.causes.settled import Settled
 from platewatch.monitor.causes.views import View
 from platewatch.monitor.estimator import FieldState, Observed, Quiet
 from platewatch.types import Array
 
-PLAIN = (Cause.SENSOR_STUCK, Cause.SENSOR_REVERSED)
 PROBABILITY = 0.99  # of a finding that needs no model
-SHORTEST_US = 60_000_000  # a plate watched for less has no field worth keeping
 
 
 @dataclass(frozen=True)
 class Plain:
-    """still, mirrors: what each test carries along;  found: cause by thermocouple"""
+    """still, mirrors, jumps, levels: what each test carries along;  found: cause by thermocouple"""
 
     still: Still
     mirrors: Mirrors
+    jumps: Jumps
+    levels: Levels
     found: Mapping[int, Cause]
 
 
 def begin(quiet: Quiet) -> Plain:
     """Before the first reading."""
-    return Plain(nothing_still(quiet), no_mirrors(quiet), {})
+    return Plain(nothing_still(quiet), no_mirrors(quiet), no_jumps(quiet), no_levels(quiet), {})
 
 
 def watch(
     quiet: Quiet,
     plain: Plain,
     at_us: int,
+    dt_us: int,
     seen: Observed,
     field: FieldState | None,
     junctions: Mapping[str, float],
@@ -56,14 +59,18 @@ def watch(
     mirrors = look(
         quiet, plain.mirrors, at_us, degC, seen.around, junctions, frozenset(plain.found)
     )
+    jumps = follow(quiet, plain.jumps, degC)
+    levels = compare(quiet, plain.levels, degC, dt_us / 1e6)
     found: dict[int, Cause] = {}
-    for causes, numbers in (
+    for cause, numbers in (
+        (Cause.SENSOR_STEP, levels.jumped),
+        (Cause.SENSOR_NOISY, jumps.noisy),
         (Cause.SENSOR_STUCK, frozen(quiet, still, at_us, expected)),
         (Cause.SENSOR_REVERSED, mirrored(mirrors, at_us)),
     ):
-        if causes.value not in off:
-            found |= dict.fromkeys(sorted(numbers), causes)
-    return Plain(still, mirrors, found)
+        if cause.value not in off:
+            found |= dict.fromkeys(sorted(numbers), cause)
+    return Plain(still, mirrors, jumps, levels, found)
 
 
 def _expected(quiet: Quiet, field: FieldState) -> Array:
@@ -93,4 +100,4 @@ def verdict(quiet: Quiet, field: FieldState, cause: Cause, sensor: int, since_us
     return Settled(view, field.at_us)
 
 
-__all__ = ["PLAIN", "Plain", "begin", "verdict", "watch"]
+__all__ = ["Plain", "begin", "verdict", "watch"]

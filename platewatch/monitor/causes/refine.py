@@ -20,6 +20,7 @@ from platewatch.monitor.causes.signatures import Bank
 from platewatch.types import Array
 
 NEAR = 0.17  # patterns within this share of sqrt(plate area) belong to one source
+NEAR_HEAT = 0.25  # heat between thermocouples is less well placed than a load on one
 THIN_AFTER = 60  # beyond this many ticks only every THIN-th counts in the Gram matrix
 THIN = 4
 MISMATCH = 0.1  # share of a response that a right cause still gets wrong
@@ -65,7 +66,8 @@ def columns_of(bank: Bank, cause: Cause, subject: str, x_m: float, y_m: float) -
     family, which = FAMILY_OF[cause], bank.column_pattern
     if family is Family.SOURCE:
         table = _source_places(bank)
-        near = np.hypot(table[:, 0] - x_m, table[:, 1] - y_m) <= NEAR * bank.scale_m
+        reach = NEAR_HEAT if cause is Cause.UNKNOWN_HEAT else NEAR
+        near = np.hypot(table[:, 0] - x_m, table[:, 1] - y_m) <= reach * bank.scale_m
         return np.asarray(np.flatnonzero(near[which]), dtype=np.int64)
     key = ("columns", cause, subject)
     if key not in bank.made:
@@ -108,6 +110,7 @@ FAMILY_OF = {
     Cause.SENSOR_LOOSE: Family.SENSOR,
     Cause.SENSOR_STUCK: Family.SENSOR,
     Cause.SENSOR_REVERSED: Family.SENSOR,
+    Cause.SENSOR_NOISY: Family.SENSOR,
     Cause.JUNCTION_BLOCK: Family.BLOCK,
 }
 

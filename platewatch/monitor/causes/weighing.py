@@ -18,6 +18,10 @@ from platewatch.types import Array
 DOUBTFUL_PAIR = 10.0
 DOUBTFUL = 100.0  # nats of evidence above which misfit, not noise, decides between causes
 OPEN_FLOOR = 0.1
+# A steady drift has no load's course: a load that explains this much less of the evidence
+# does not explain it as well, and the pair is less open, though never closed.
+DRIFT_AHEAD = 0.2
+DRIFT_FLOOR = 0.03
 RELIABILITY = 0.95  # of an answer
 SUSPECT_CAUSES = (Cause.SENSOR_LOOSE, Cause.SENSOR_DRIFT)
 
@@ -42,7 +46,12 @@ def weigh(fits: list[Fit], pairs: Sequence[tuple[int, int, float]] = ()) -> tupl
     for load, loose, odds in pairs:
         both = among[load] + among[loose]
         lean = odds / (1 + abs(odds) / DOUBTFUL_PAIR) + prior[load] - prior[loose]
-        share = np.clip(1 / (1 + np.exp(-lean)), OPEN_FLOOR, 1 - OPEN_FLOOR)
+        floor = OPEN_FLOOR
+        if fits[loose].cause is Cause.SENSOR_DRIFT:
+            ahead = evidence[loose] - evidence[load]
+            if ahead > DRIFT_AHEAD * evidence[loose]:
+                lean, floor = lean - ahead / doubt, DRIFT_FLOOR
+        share = np.clip(1 / (1 + np.exp(-np.clip(lean, -50, 50))), floor, 1 - OPEN_FLOOR)
         among[load], among[loose] = both * share, both * (1 - share)
     return np.asarray(any_cause * among), float(1 - any_cause)
 

@@ -10,7 +10,9 @@ import pytest
 
 from platewatch.monitor.causes.catalogue import Cause
 from platewatch.monitor.causes.frozen import flicker, frozen, listen, nothing_still
+from platewatch.monitor.causes.jumped import compare, largest_bend_K, no_levels
 from platewatch.monitor.causes.mirrored import from_neighbours, look, mirrored, no_mirrors
+from platewatch.monitor.causes.noisy import follow, no_jumps
 from platewatch.monitor.causes.plain import begin, watch
 from platewatch.monitor.estimator import Quiet
 from platewatch.types import Array
@@ -160,6 +162,83 @@ def test_a_cause_that_is_switched_off_is_not_looked_for() -> None:
     for off in ((), (Cause.SENSOR_REVERSED.value,)):
         plain = begin(quiet)
         for k in range(10):
-            plain = watch(quiet, plain, T0 + k * TICK_US, seen, None, {}, off)
+            plain = watch(quiet, plain, T0 + k * TICK_US, TICK_US, seen, None, {}, off)
         found[off] = set(plain.found.values())
     assert found == {(): {Cause.SENSOR_REVERSED}, (Cause.SENSOR_REVERSED.value,): set()}
+
+
+def _noisy_after(readings: Array) -> dict[int, int]:
+    """Ticks after which each thermocouple is said to jump about."""
+    quiet, found = _quiet(), {}
+    jumps = no_jumps(quiet)
+    for k, row in enumerate(readings):
+        jumps = follow(quiet, jumps, row)
+        for sensor in jumps.noisy:
+            found.setdefault(sensor, k)
+    return found
+
+
+def test_ten_times_the_noise_is_found_within_two_minutes() -> None:
+    """Bad ground or a loose terminal: target 2 min."""
+    rng = np.random.default_rng(6)
+    readings = _readings(200, 0.05, rng)
+    readings[100:, 2] += 1.0 * rng.standard_normal(100)
+    found = _noisy_after(readings)
+    assert list(found) == [2]
+    assert (found[2] - 100) * 2.0 <= 120.0
+
+
+def test_steps_and_steep_ramps_are_no_noise() -> None:
+    """A thermocouple that jumps by 20 K once, one that climbs 2 K/s, and a day of soak."""
+    readings = _readings(43_200, 0.0, np.random.default_rng(7))
+    readings[500:, 0] += 20.0
+    readings[600:700, 1] += 4.0 * np.arange(100)
+    readings[700:, 1] += 400.0
+    assert _noisy_after(readings) == {}
+
+
+def _jumped_after(readings: Array) -> dict[int, int]:
+    """Ticks after which each thermocouple is said to have jumped."""
+    quiet, found = _quiet(), {}
+    levels = no_levels(quiet)
+    for k, row in enumerate(readings):
+        levels = compare(quiet, levels, row, 2.0)
+        for sensor in levels.jumped:
+            found.setdefault(sensor, k)
+    return found
+
+
+@pytest.mark.parametrize("step_K", [-20.0, -5.0, 5.0, 20.0])
+def test_a_step_of_five_kelvin_is_found_within_ten_seconds(step_K: float) -> None:
+    """Both ways, in a ramp."""
+    readings = _readings(200, 0.05, np.random.default_rng(8))
+    readings[100:, 1] += step_K
+    found = _jumped_after(readings)
+    assert list(found) == [1]
+    assert (found[1] - 100) * 2.0 <= 10.0
+
+
+def test_a_single_spike_is_no_step() -> None:
+    """One reading 30 K off, then as before."""
+    readings = _readings(200, 0.0, np.random.default_rng(9))
+    readings[100, 2] -= 30.0
+    assert _jumped_after(readings) == {}
+
+
+def test_the_hardest_cold_load_is_no_step() -> None:
+    """The plate under the thermocouple falls by 2 K/s from one instant on, seen through its
+    lag of 5 s; and a day of soak."""
+    rng = np.random.default_rng(10)
+    t = np.arange(43_200) * 2.0 - 200.0
+    lagged = np.where(t > 0, t - 5.0 * -np.expm1(-np.maximum(t, 0.0) / 5.0), 0.0)
+    since = np.maximum(t - 20.0, 0.0)
+    stopped = np.where(since > 0, since - 5.0 * -np.expm1(-since / 5.0), 0.0)
+    fallen = 2.0 * (lagged - stopped)
+    readings = _readings(43_200, 0.0, rng)
+    readings[:, 0] -= fallen
+    assert _jumped_after(readings) == {}
+
+
+def test_the_largest_bend_grows_with_the_tick_and_shrinks_with_the_lag() -> None:
+    """2 K/s for 2 s through 5 s of lag: 1.5 * 4 (1 - exp(-0.4)) = 1.98 K."""
+    assert largest_bend_K(_quiet(), 2.0) == pytest.approx(6.0 * (1 - np.exp(-0.4)))
