@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from platewatch.monitor import pipeline
 from platewatch.monitor.causes.catalogue import Cause
 from platewatch.monitor.causes.settled import missed_now
+from platewatch.monitor.estimator import advance
+from platewatch.monitor.inputs import take_in
 from platewatch.monitor.outlook import Prospect, now_of, present
 from platewatch.monitor.peak import WHOLE_PLATE, hottest_now
 from platewatch.monitor.pipeline import Monitor, State
-from platewatch.types import Array
+from platewatch.types import Array, Tick
 from sim_sensors.simulation import TrueState
 from tests.bench.accuracy.interpolation import Interpolator, interpolators
 from tests.bench.accuracy.plants import extent_m
@@ -82,6 +84,7 @@ class Score:
     false: set[tuple[str, str]] = field(default_factory=set)
     named_s: float | None = None
     suspected_s: float | None = None
+    quiet: State | None = None
 
     def run(self, plate: str, scenario: str, seed: int, watch_s: float) -> Scored:
         watch, monitor = self.watch, self.watch.monitor
@@ -95,7 +98,9 @@ class Score:
         times: dict[str, float | None] = dict.fromkeys(("coming", "truth", "sensor"))
         while watch.run.at_s < self.onset_s + watch_s - 1e-9:
             sample = watch.run.step()
-            watch.state, outcome = pipeline.step(monitor, watch.state, _tick_of(sample))
+            tick = _tick_of(sample)
+            watch.state, outcome = pipeline.step(monitor, watch.state, tick)
+            self._follow_quietly(tick)
             since = sample.at_s - self.onset_s
             for e in outcome.alarm_events:
                 if e.to_state in ANNUNCIATED:
@@ -126,6 +131,17 @@ class Score:
             times["sensor"],
             watch_s,
         )
+
+    def _follow_quietly(self, tick: Tick) -> None:
+        """The quiet filter by itself: it believes every reading and knows no cause."""
+        monitor = self.watch.monitor
+        before = self.quiet or self.watch.state
+        heard, seen = take_in(monitor.quiet, before.heard, tick, monitor.unit)
+        picture = before.picture
+        assert picture is not None
+        if self.quiet is not None:
+            picture, _ = advance(monitor.quiet, picture, tick.dt_us, seen)
+        self.quiet = replace(before, heard=heard, picture=picture)
 
     def _prospects(self) -> tuple[Prospect, ...]:
         state = self.watch.state
@@ -160,12 +176,15 @@ class Score:
         true = watch._to_cells @ truth.field
         top = truth.peak_degC
         q, belief = monitor.quiet, state.picture.belief
-        plain = q.reduced.V @ belief.mean[q.blocks.a]
+        assert self.quiet is not None
+        assert self.quiet.picture is not None
+        by_itself = self.quiet.picture.belief
+        plain = q.reduced.V @ by_itself.mean[q.blocks.a]
         fields = {OURS: mean_field(monitor, state), QUIET: plain}
         fields |= {name: f(state.heard.degC) for name, f in compare.items()}
         fresh = present(monitor.means, belief, _missed(state))
         now = now_of(state.ahead, fresh)[WHOLE_PLATE]
-        quiet = hottest_now(q, monitor.where, belief, monitor.draws, WHOLE_PLATE)
+        quiet = hottest_now(q, monitor.where, by_itself, monitor.draws, WHOLE_PLATE)
         peaks = {n: float(np.nanmax(f)) - top for n, f in fields.items()}
         peaks |= {OURS: now.degC - top, QUIET: quiet.degC - top}
         covered = {w: _within(now.samples, top, w / 100) for w in (90, 95)}
