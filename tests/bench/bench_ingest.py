@@ -1,6 +1,6 @@
 """The bus into the record: broker to durable commit to acknowledgement, beside bare paho.
 
-Run: python tests/bench/bench_ingest.py [MESSAGES]      (needs mosquitto)
+Run: python -m tests.bench.bench_ingest [MESSAGES]      (needs mosquitto)
 
 Each round fills persistent QoS 1 sessions of mosquitto with the same messages while nobody
 listens, then drains them, in turns, so that a busy machine slows all:

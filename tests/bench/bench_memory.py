@@ -1,6 +1,6 @@
 """Memory over a day of a plate's traffic, replayed through session and record.
 
-Run: python tests/bench/bench_memory.py [TICKS] [--causes]     (43,200 ticks of 2 s are a day)
+Run: python -m tests.bench.bench_memory [TICKS] [--causes]     (43,200 ticks of 2 s are a day)
 
 The demonstration table heats up once and then holds: readings of the simulated clean batch,
 the hold repeated.  Resident memory is sampled every 500 ticks; after the warm-up it must stay

@@ -1,6 +1,6 @@
 """Messages of hundreds of plates through one process, without their estimators.
 
-Run: python tests/bench/bench_plates.py [PLATES]
+Run: python -m tests.bench.bench_plates [PLATES]
 
 Every plate sends one message of its 9 thermocouples and 3 duties each 2 s, 250 messages a
 second for 500 plates.  Decoded, sorted into ticks and stored in one record, a commit for
