@@ -13,7 +13,8 @@ def _problem(seed: int, columns: int = 12, variants: int = 9) -> tuple[Array, Ar
     rng = np.random.default_rng(seed)
     A = rng.standard_normal((40, columns)) + 1.5 * rng.standard_normal((40, 1))
     T = np.abs(rng.standard_normal((variants, columns, MOST_SUBSETS)))
-    return A.T @ A, A.T @ (3 * rng.standard_normal(40)), T
+    A = A / 10
+    return A.T @ A, A.T @ (9 * rng.standard_normal(40)), T
 
 
 def _one_by_one(G: Array, b: Array, T: Array, signs: Array) -> list[Posterior]:
@@ -32,7 +33,7 @@ def test_the_best_subset_is_the_non_negative_solution(seed: int, sign: float) ->
     at_once, count = best_of(G, b, T, signs)
     assert count == len(T)
     for ours, theirs in zip(at_once, _one_by_one(G, b, T, signs), strict=True):
-        assert ours.evidence == pytest.approx(theirs.evidence, rel=1e-4, abs=1e-4)
+        assert ours.evidence == pytest.approx(theirs.evidence, abs=2e-3)
         assert ours.z == pytest.approx(theirs.z, rel=1e-3, abs=1e-4)
         cov = ours.root @ ours.root.T
         assert cov == pytest.approx(theirs.root @ theirs.root.T, rel=1e-2, abs=1e-3)
