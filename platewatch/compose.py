@@ -24,10 +24,9 @@ from platewatch.adapters.messages_send import (
 from platewatch.adapters.storage import AlarmRow, DiskFullError, Run, Signs, Sizes, Store
 from platewatch.adapters.tables_out import write_table
 from platewatch.clock import Clock
+from platewatch.compose_monitor import Monitor, build_monitor
 from platewatch.compose_plate import (
     Description,
-    Monitor,
-    build_monitor,
     describe,
     surround_channels,
     with_broker,

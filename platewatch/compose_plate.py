@@ -1,4 +1,4 @@
-"""What is built from a description alone: no bus, no record, so that it loads quickly."""
+"""What is built from a description alone: no bus, record or causes, so that it loads quickly."""
 
 from __future__ import annotations
 
@@ -8,21 +8,14 @@ from pathlib import Path
 
 from platewatch.adapters.settings import Description, load
 from platewatch.errors import SettingsError
-from platewatch.monitor.causes.layer import build_model
-from platewatch.monitor.estimator import build_quiet
-from platewatch.monitor.loops import build_loops
-from platewatch.monitor.options import CAUSE_NAMES
-from platewatch.monitor.peak import places, standard_draws
-from platewatch.monitor.pipeline import Monitor
+from platewatch.monitor.estimator import Quiet, build_quiet
 from platewatch.thermal.conduction import build_model as build_thermal
 from platewatch.thermal.grid import build_grid
 from platewatch.thermal.reduction import reduce
-from platewatch.units import TemperatureUnit
 
 __all__ = [
     "Description",
-    "Monitor",
-    "build_monitor",
+    "build_filter",
     "describe",
     "reference_degC",
     "surround_channels",
@@ -46,32 +39,11 @@ def reference_degC(description: Description) -> float:
     return REFERENCE_DEGC if reference is None else reference
 
 
-def build_monitor(description: Description, *, causes: bool = True) -> Monitor:
-    """The estimator, forecast and alarms of one plate; without `causes`, the filter alone.
-
-    So, too, where the description turns every cause off.
-    """
-    causes = causes and not set(CAUSE_NAMES) <= set(description.causes.off)
-    plate = description.plate
-    reference = reference_degC(description)
+def build_filter(description: Description) -> Quiet:
+    """The plate's reduced model and quiet filter."""
+    plate, reference = description.plate, reference_degC(description)
     reduced = reduce(build_thermal(plate, build_grid(plate), reference))
-    quiet = build_quiet(plate, reduced, reference)
-    limits = description.alarm_limits
-    zones = tuple({limit.zone for limit in limits if limit.zone})
-    return Monitor(
-        quiet=quiet,
-        loops=build_loops(plate),
-        where=places(quiet, tuple(sorted(zones))),
-        draws=standard_draws(quiet.blocks.size),
-        limits=limits,
-        recipes=description.recipes,
-        estimator=description.estimator,
-        forecast=description.forecast,
-        unit=TemperatureUnit(description.unit),
-        causes=build_model(quiet, description.estimator.tick_us, description.causes)
-        if causes
-        else None,
-    )
+    return build_quiet(plate, reduced, reference)
 
 
 def surround_channels(description: Description) -> tuple[str, ...]:

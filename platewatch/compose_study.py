@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 
-from platewatch.compose_plate import Description, build_monitor, reference_degC
+from platewatch.compose_plate import Description, build_filter, reference_degC
 from platewatch.studies.facts import Facts, derive
 from platewatch.studies.picture import svg_picture
 from platewatch.studies.picture_plate import plate_picture
@@ -18,8 +18,7 @@ __all__ = ["Facts", "WhatIf", "derive_facts", "draw_field", "draw_plate", "what_
 
 def derive_facts(description: Description) -> Facts:
     """What follows from a description, for `check`."""
-    quiet = build_monitor(description, causes=False).quiet
-    return derive(quiet, reference_degC(description))
+    return derive(build_filter(description), reference_degC(description))
 
 
 def draw_plate(description: Description) -> str:

@@ -17,6 +17,7 @@ RUNNING = (
     *BASIC,
     "platewatch",
     "platewatch.compose",
+    "platewatch.compose_monitor",
     "platewatch.compose_plate",
     "platewatch.compose_study",
     "platewatch.clock",

@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from platewatch.compose_plate import Monitor, build_monitor, describe
+from platewatch.compose import Monitor, build_monitor, describe
 from platewatch.session import Keeping, RecordState, Session, record_event
 from platewatch.types import FILLED, BatchEvent, Flag, Gap, Outcome, Reading
 
