@@ -270,7 +270,8 @@ def _reading(column: _Column, cell: str, at_us: int) -> Reading | str:
     value = column.value(float(cell))
     if not units.plausible(value, column.unit):
         low, high = units.PLAUSIBLE.get(column.unit, (-1e300, 1e300))
-        return f"outside {low:g} to {high:g} {column.unit}"
+        unit = "" if column.unit == "1" else f" {column.unit}"
+        return f"outside {low:g} to {high:g}{unit}"
     return Reading(at_us, column.channel, value, at_us, Flag.NONE)
 
 

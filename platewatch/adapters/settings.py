@@ -17,6 +17,7 @@ from platewatch.adapters import settings_schema_plate as plate_tables
 from platewatch.adapters import settings_schema_run as run_tables
 from platewatch.adapters.settings_convert import Converter, cause_name, metres, shape
 from platewatch.adapters.settings_draft import Draft, draft, parse, read_bytes
+from platewatch.adapters.settings_schema import Mistake
 from platewatch.adapters.settings_schema_sensor import SensorEntry
 from platewatch.errors import SettingsError
 from platewatch.monitor.limits import AlarmLimit
@@ -131,9 +132,20 @@ def load(path: Path) -> Description:
     read, mistakes = draft(text)
     mistakes += [*settings_rules.mistakes(read), *settings_places.mistakes(read)]
     if mistakes:
-        sentences = sorted({text.sentence(mistake) for mistake in mistakes})
+        sentences = sorted({text.sentence(each) for each in _without_echoes(mistakes)})
         raise SettingsError("\n".join(sentence for _, sentence in sentences))
     return _description(path, hashlib.sha256(content).hexdigest(), read)
+
+
+def _without_echoes(mistakes: list[Mistake]) -> list[Mistake]:
+    """A key that is there but misspelt is not called missing, too."""
+    meant = {(*each.where[:-1], each.remedy) for each in mistakes}
+    return [
+        each
+        for each in mistakes
+        if not each.reason.startswith("is missing")
+        or (*each.where[:-1], f"did you mean {each.where[-1]!r}?") not in meant
+    ]
 
 
 def _description(path: Path, sha256: str, read: Draft) -> Description:

@@ -224,6 +224,14 @@ def test_a_misspelt_needed_key_is_not_also_called_missing(tmp_path: Path) -> Non
     assert "did you mean 'thickness_mm'?" in sentence
 
 
+def test_a_misspelt_duty_is_not_also_called_missing(tmp_path: Path) -> None:
+    """`dutty = "0..1"` once gave two lines: no such key, and the scale is asked."""
+    first = EXAMPLE.index("\nduty = ")
+    text = EXAMPLE[:first] + EXAMPLE[first:].replace("\nduty = ", "\ndutty = ", 1)
+    (sentence,) = sentences(tmp_path / "p.toml", text)
+    assert "did you mean 'duty'?" in sentence
+
+
 def test_all_mistakes_come_at_once_in_the_order_of_the_file(tmp_path: Path) -> None:
     """A person corrects a file in one round, not in ten."""
     text = EXAMPLE
