@@ -226,8 +226,9 @@ gap = Table(
     metadata,
     _text("plate"),
     _time("from_us"),
-    _time("to_us"),
+    # The key comes first: else the integrity check of SQLite 3.40 misreads the row.
     _text("what"),
+    _time("to_us"),
     PrimaryKeyConstraint("plate", "from_us", "what"),
     sqlite_with_rowid=False,
 )

@@ -127,7 +127,7 @@ def write_outcomes(
     shots = [o.shot for o in outcomes if o.shot]
     _insert(connection, _BASIS, [(h, plate, description_sha256) for h in {s.basis for s in shots}])
     _insert(connection, _SHOT, [_shot_row(plate, shot) for shot in shots])
-    gaps = [(plate, g.from_us, g.to_us, g.what) for o in outcomes for g in o.gaps]
+    gaps = [(plate, g.from_us, g.what, g.to_us) for o in outcomes for g in o.gaps]
     _insert(connection, _GAP, gaps)
     filled = [(plate, g.from_us, g.what) for o in outcomes for g in o.gaps if g.what == FILLED]
     _insert(connection, _FILLED, filled)

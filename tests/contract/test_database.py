@@ -14,7 +14,7 @@ import pytest
 from platewatch.adapters import storage_file
 from platewatch.adapters.storage import DatabaseBusyError, DiskFullError, Store
 from platewatch.errors import StorageError
-from platewatch.types import Reading
+from platewatch.types import Gap, Outcome, Reading
 
 # Names and order of the published contract; columns added since stand after "+".
 CONTRACT = {
@@ -32,7 +32,7 @@ CONTRACT = {
     "person_action": "seq at_us plate person verb alarm subject reason prev_hash hash",
     "log_note": "seq at_us plate person text prev_hash hash",
     "run": "run_no started_us version description_sha256 + plate last_tick_us",
-    "gap": "plate from_us to_us what",
+    "gap": "plate from_us what to_us",
 }
 
 READINGS = [Reading(n * 2_000_000, f"sensor/T{k}", 20.0 + k, 0) for n in range(3) for k in (1, 2)]
@@ -316,3 +316,12 @@ def test_two_programs_that_create_the_same_file_both_get_it(tmp_path: Path):
     ):
         one.write("table", [], READINGS, {})
         assert two.write("table", [], READINGS, {}).duplicates == len(READINGS)
+
+
+def test_a_record_with_a_gap_is_found_sound(tmp_path: Path) -> None:
+    """`verify` once took the gap's own row for a damaged one (SQLite 3.40, key not first)."""
+    with Store.open(url(tmp_path / "gap.sqlite")) as store:
+        quiet = Outcome(60_000_000, gaps=(Gap(10_000_000, 50_000_000, "no usable reading"),))
+        store.write("table", [quiet], READINGS, {})
+        assert not list(store.verify().findings)
+        assert store.gaps("table") == [Gap(10_000_000, 50_000_000, "no usable reading")]
