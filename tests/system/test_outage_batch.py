@@ -147,7 +147,8 @@ class Batch:
             self._send(line, clock, [s for s in after if s[0] <= step_us])
             clock.set_back_us = 90_000_000
             self._send(line, clock, [s for s in after if s[0] > step_us])
-            wait_for(lambda: count(self.record, "reading") >= len(self.samples) * 21, 5)
+            channels = count(self.record, "channel")
+            wait_for(lambda: count(self.record, "reading") >= len(self.samples) * channels, 20)
             line.disconnect()
             line.loop_stop()
         finally:
@@ -157,9 +158,12 @@ class Batch:
         assert len(held) == 180
 
     def _send(self, line: Client, clock: PlantClock, these: list[tuple[int, str]]) -> None:
+        last = None
         for at_us, body in these:
             clock.wait_until(at_us)
-            line.publish("plates/table-1/readings", body, qos=1)
+            last = line.publish("plates/table-1/readings", body, qos=1)
+        if last is not None:
+            last.wait_for_publish(10)
 
 
 @pytest.fixture(scope="module")
